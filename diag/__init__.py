@@ -1,0 +1,1 @@
+"""diag: the fault-isolation bench for gas-turbine oil circuits."""

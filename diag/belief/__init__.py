@@ -1,0 +1,1 @@
+"""Odds of every cause: the network, weighted hypotheses, evidence and explanation."""

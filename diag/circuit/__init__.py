@@ -1,0 +1,1 @@
+"""What is known of an oil circuit: records, reading, graph and review."""

@@ -44,6 +44,8 @@ class Finding:
     """As given: an outcome word or a number with its unit."""
     trust: float = 1.0
     """P(the finding is as good as its kind); the rest says nothing."""
+    world: tuple[tuple[str, float], ...] = ()
+    """Modes restored before it was taken, each with the chance that it worked."""
 
     @property
     def key(self) -> str:

@@ -14,13 +14,17 @@ from collections.abc import Mapping, Sequence
 
 import numpy as np
 
-from diag.belief.frame import Array, Frame, Indices
+from diag.belief.frame import Array, Frame, Indices, World
+
+
+Sights = Mapping[tuple[str, World], Sequence[tuple[Indices, Array]]]
+"""Node and world to its findings, each as (digit per mode, likelihood per signature)."""
 
 
 def log_evidence(
     frame: Frame,
     odds: Array,
-    sights: Mapping[str, Sequence[tuple[Indices, Array]]],
+    sights: Sights,
     budget: int,
 ) -> float | None:
     """log P(findings), or None when the sum has more than `budget` terms.
@@ -28,10 +32,10 @@ def log_evidence(
     Args:
         frame: the circuit.
         odds: (modes + 1,) prior odds.
-        sights: node to its findings, each as (digit per mode, likelihood per signature).
+        sights: the findings, by the condition they read.
         budget: most terms × settings of instruments and promoting components.
     """
-    terms = math.prod(_size(frame, name) for name in sights)
+    terms = math.prod(_size(frame, name) for name, _ in sights)
     fixed = _fixed(frame, sights)
     settings = math.prod(1 + len(frame.modes_of(c)) for c in fixed)
     if terms * max(settings, len(frame.refs)) > budget:
@@ -51,7 +55,7 @@ def _size(frame: Frame, name: str) -> int:
     return (downs + 1) * (side.states - downs)
 
 
-def _fixed(frame: Frame, sights: Mapping[str, Sequence[tuple[Indices, Array]]]) -> list[str]:
+def _fixed(frame: Frame, sights: Sights) -> list[str]:
     """Components whose modes are tried one by one: instruments in use, and promoters."""
     modes = {int(m) for group in sights.values() for d, _ in group for m in np.flatnonzero(d)}
     modes |= {int(m) for m in frame.promotions[1]}
@@ -61,7 +65,7 @@ def _fixed(frame: Frame, sights: Mapping[str, Sequence[tuple[Indices, Array]]]) 
 def _setting(
     frame: Frame,
     odds: Array,
-    sights: Mapping[str, Sequence[tuple[Indices, Array]]],
+    sights: Sights,
     fixed: Sequence[str],
     chosen: Sequence[int],
 ) -> Array:
@@ -76,8 +80,8 @@ def _setting(
     modes = modes[np.argsort(frame.component[modes], kind="stable")]
     weight = math.prod(float(raised[m]) for m in chosen) / float(norm.prod())
     coefficient, product = np.array([weight]), np.ones((1, len(modes)))
-    for name, group in sights.items():
-        own, columns = _expansion(frame, name, group, chosen, modes)
+    for where, group in sights.items():
+        own, columns = _expansion(frame, where, group, chosen, modes)
         coefficient = (coefficient[:, None] * own).ravel()
         product = (product[:, None, :] * columns).reshape(-1, len(modes))
     if not len(modes):
@@ -90,12 +94,13 @@ def _setting(
 
 def _expansion(
     frame: Frame,
-    name: str,
+    where: tuple[str, World],
     group: Sequence[tuple[Indices, Array]],
     chosen: Sequence[int],
     modes: Indices,
 ) -> tuple[Array, Array]:
     """Coefficients (terms,) and cumulative products (terms, modes) of one condition."""
+    name, world = where
     side = frame.sides[name]
     downs = side.down.stop - side.down.start
     ups = side.states - 1 - downs
@@ -106,7 +111,7 @@ def _expansion(
     for d, u in np.ndindex(downs + 1, ups + 1):
         grid[d, u] = seen[side.normal + u - d]
     coefficient = grid[:-1, :-1] - grid[1:, :-1] - grid[:-1, 1:] + grid[1:, 1:]
-    block = frame.cumulative[:, side.down.start : side.up.stop]
+    block = frame.table(world)[:, side.down.start : side.up.stop]
     here = frame.leak[side.down.start : side.up.stop] * block[list(chosen)].prod(axis=0)
     return (
         (coefficient * _grid(here[None, :], downs)[..., 0]).ravel(),

@@ -7,6 +7,7 @@ the chance that each alone does. The state is `up - down`, so opposing causes ca
 
 from __future__ import annotations
 
+import math
 from collections.abc import Collection, Iterable, Mapping
 from dataclasses import dataclass
 from functools import cached_property
@@ -19,6 +20,8 @@ from diag.circuit.records import Effect, Signal
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
+World = tuple[tuple[str, float], ...]
+"""Modes restored since the complaint, each with the chance that it worked; () as found."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,7 +57,8 @@ class Frame:
         self.nodes = tuple(circuit.nodes)
         self.sides: dict[str, Side] = {}
         self.cumulative, self.leak = self._tables(circuit.nodes)
-        self._transfers: dict[str, Transfer] = {}
+        self._transfers: dict[tuple[str, World], Transfer] = {}
+        self._worlds: dict[World, Array] = {(): self.cumulative}
 
     @property
     def none(self) -> int:
@@ -149,11 +153,27 @@ class Frame:
         touched[self.coupled] = True
         return np.append(touched[self.component[:-1]], True)
 
-    def through(self, observable: Observable) -> Transfer:
+    def table(self, world: World) -> Array:
+        """`cumulative` after the rectifications of `world`.
+
+        A restored mode acts as before with the chance that the rectification failed. That
+        chance is taken anew for each condition, which slightly favours another cause over a
+        failed rectification when several conditions stay abnormal.
+        """
+        if world not in self._worlds:
+            table = self.cumulative.copy()
+            for ref, success in world:
+                row = self.index[ref]
+                table[row] = success + (1.0 - success) * table[row]
+            self._worlds[world] = table
+        return self._worlds[world]
+
+    def through(self, observable: Observable, world: World = ()) -> Transfer:
         """How the instruments of an observation pass its state on."""
-        if observable.id not in self._transfers:
-            self._transfers[observable.id] = transfer(self, observable, {})
-        return self._transfers[observable.id]
+        key = (observable.id, world)
+        if key not in self._transfers:
+            self._transfers[key] = transfer(self, observable, {}, world)
+        return self._transfers[key]
 
 
 @dataclass(frozen=True, slots=True)
@@ -170,7 +190,9 @@ class Transfer:
     matrices: Array
 
 
-def transfer(frame: Frame, observable: Observable, fold: Mapping[str, Array]) -> Transfer:
+def transfer(
+    frame: Frame, observable: Observable, fold: Mapping[str, Array], world: World = ()
+) -> Transfer:
     """Builds the transfer; instruments in `fold` are averaged over their modes' chances."""
     node = frame.circuit.nodes[observable.node]
     size = len(node.record.states)
@@ -179,7 +201,10 @@ def transfer(frame: Frame, observable: Observable, fold: Mapping[str, Array]) ->
     for name in observable.through:
         modes = frame.circuit.components[name].modes
         steps = [np.eye(size)]
-        steps += [signal_matrix(m.record.signal, size, node.normal) for m in modes]
+        for mode in modes:
+            step = signal_matrix(mode.record.signal, size, node.normal)
+            kept = math.prod(1.0 - success for ref, success in world if ref == mode.ref)
+            steps.append(kept * step + (1.0 - kept) * np.eye(size))
         if name in fold:
             chances = [1.0 - fold[name].sum(), *fold[name]]
             steps = [np.tensordot(chances, np.array(steps), axes=1)]

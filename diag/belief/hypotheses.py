@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 from diag.belief.evidence import Finding, state_likelihood
 from diag.belief.exact import log_evidence
-from diag.belief.frame import Array, Frame, Indices, state_chances
+from diag.belief.frame import Array, Frame, Indices, World, state_chances
 from diag.circuit.model import UNLISTED, Circuit
 from diag.errors import DiagError
 
@@ -33,6 +33,10 @@ _FLOOR = 1e-12
 """Search keeps impossible hypotheses growable: a further mode may make them possible."""
 
 
+View = tuple[str, World]
+"""A condition as it stood in one world; findings of one view share its state."""
+
+
 class Contradiction(DiagError):
     """No hypothesis allows the findings as given."""
 
@@ -42,6 +46,7 @@ class Sight:
     """One finding as arrays: which node, through which instruments, how likely per state."""
 
     node: str
+    world: World
     digit: Indices
     table: Array
     """(signatures, states) P(finding | true state, instrument signature)."""
@@ -86,7 +91,7 @@ class Engine:
         self.circuit = circuit
         self.frame = Frame(circuit)
         self.odds = self.frame.odds(worked_on) if odds is None else odds
-        self._chances: dict[str, tuple[Array, Array, Array]] = {}
+        self._chances: dict[View, tuple[Array, Array, Array]] = {}
 
     @cached_property
     def normaliser(self) -> Array:
@@ -109,9 +114,10 @@ class Engine:
         """The findings as arrays."""
         found = []
         for finding in findings:
-            transfer = self.frame.through(finding.observable)
+            transfer = self.frame.through(finding.observable, finding.world)
             table = transfer.matrices @ state_likelihood(finding)
-            found.append(Sight(finding.observable.node, transfer.digit, table))
+            node = finding.observable.node
+            found.append(Sight(node, finding.world, transfer.digit, table))
         return tuple(found)
 
     @cached_property
@@ -123,21 +129,21 @@ class Engine:
         pairs = np.stack([first[apart], second[apart]], axis=1).astype(np.int64)
         return np.arange(count, dtype=np.int64)[:, None], pairs
 
-    def chances(self, node: str) -> tuple[Array, Array, Array]:
+    def chances(self, view: View) -> tuple[Array, Array, Array]:
         """State chances of one node for the empty set (1, s), singles and pairs."""
-        if node not in self._chances:
+        if view not in self._chances:
             none = np.zeros((1, 0), dtype=np.int64)
             groups = (none, *self.pairs)
-            one, two, three = (self._states(node, modes) for modes in groups)
-            self._chances[node] = (one, two, three)
-        return self._chances[node]
+            one, two, three = (self._states(view, modes) for modes in groups)
+            self._chances[view] = (one, two, three)
+        return self._chances[view]
 
-    def _states(self, node: str, modes: Indices) -> Array:
-        side = self.frame.sides[node]
+    def _states(self, view: View, modes: Indices) -> Array:
+        side, table = self.frame.sides[view[0]], self.frame.table(view[1])
         columns = slice(side.down.start, side.up.stop)
         product = np.repeat(self.frame.leak[None, columns], len(modes), axis=0)
         for k in range(modes.shape[1]):
-            product *= self.frame.cumulative[modes[:, k], columns]
+            product *= table[modes[:, k], columns]
         split = side.down.stop - side.down.start
         return state_chances(product[:, :split], product[:, split:], side.normal)
 
@@ -167,9 +173,9 @@ class _Search:
         self.engine = engine
         self.frame = engine.frame
         self.sights = sights
-        self.by_node: dict[str, list[Sight]] = {}
+        self.by_view: dict[View, list[Sight]] = {}
         for sight in sights:
-            self.by_node.setdefault(sight.node, []).append(sight)
+            self.by_view.setdefault((sight.node, sight.world), []).append(sight)
         self.relevant = self._relevant()
         self.modes = np.flatnonzero(self.relevant[:-1] & (engine.odds[:-1] > 0))
         self.beam = beam
@@ -184,7 +190,7 @@ class _Search:
             for sight in self.sights
             for m in np.flatnonzero(sight.digit)
         ]
-        return self.frame.bearing_on(self.by_node, instruments)
+        return self.frame.bearing_on({node for node, _ in self.by_view}, instruments)
 
     def run(self, tolerance: float) -> tuple[Layer, ...]:
         layers = list(self._base())
@@ -215,7 +221,7 @@ class _Search:
             kept_modes = modes[kept]
             true, soft = self._likelihood(
                 len(kept_modes),
-                lambda node, n=number, k=kept: self.engine.chances(node)[n][k],
+                lambda view, n=number, k=kept: self.engine.chances(view)[n][k],
                 lambda digit, m=kept_modes: digit[m].sum(axis=1),
             )
             layers.append(self._layer(kept_modes, true, soft))
@@ -244,14 +250,14 @@ class _Search:
 
     def _likelihood(self, count, states, signature) -> tuple[Array, Array]:  # type: ignore[no-untyped-def]
         true, soft = np.zeros(count), np.zeros(count)
-        for node, sights in self.by_node.items():
+        for view, sights in self.by_view.items():
             seen = np.ones(1)
             for sight in sights:
                 if len(sight.table) == 1:
                     seen = seen * sight.table
                 else:
                     seen = seen * sight.table[signature(sight.digit)]
-            factor = np.maximum((states(node) * seen).sum(axis=-1), 0.0)
+            factor = np.maximum((states(view) * seen).sum(axis=-1), 0.0)
             with np.errstate(divide="ignore"):
                 true = true + np.log(factor)
             soft = soft + np.log(np.maximum(factor, _FLOOR))
@@ -276,7 +282,7 @@ class _Search:
         row, column, children = row[first], column[first], children[first]
         true, soft = self._likelihood(
             len(children),
-            lambda node: self._child_states(node, parents, row, column),
+            lambda view: self._child_states(view, parents, row, column),
             lambda digit: digit[children].sum(axis=1),
         )
         return self._layer(children, true, soft)
@@ -288,14 +294,14 @@ class _Search:
         weight = np.exp(layer.score - layer.score.max())
         return layer.modes[np.sort(best)], float(weight[best].sum() / weight.sum())
 
-    def _child_states(self, node: str, parents: Indices, row: Indices, column: Indices) -> Array:
-        frame = self.frame
-        side = frame.sides[node]
+    def _child_states(self, view: View, parents: Indices, row: Indices, column: Indices) -> Array:
+        frame, table = self.frame, self.frame.table(view[1])
+        side = frame.sides[view[0]]
         columns = slice(side.down.start, side.up.stop)
         above = np.repeat(frame.leak[None, columns], len(parents), axis=0)
         for k in range(parents.shape[1]):
-            above *= frame.cumulative[parents[:, k], columns]
-        product = above[row] * frame.cumulative[self.modes[column], columns]
+            above *= table[parents[:, k], columns]
+        product = above[row] * table[self.modes[column], columns]
         split = side.down.stop - side.down.start
         return state_chances(product[:, :split], product[:, split:], side.normal)
 
@@ -386,7 +392,7 @@ def _coverage(enumerated: float, layers: Sequence[Layer], search: _Search) -> Co
     """Exact where the closed sum is cheap, otherwise from the size of the last layer."""
     if search.complete:
         return Coverage(1.0, "enumerated")
-    sights = {n: [(s.digit, s.table) for s in group] for n, group in search.by_node.items()}
+    sights = {n: [(s.digit, s.table) for s in group] for n, group in search.by_view.items()}
     exact = log_evidence(search.frame, search.engine.odds, sights, EXACT_BUDGET)
     if exact is None:
         return _estimated(layers, search)

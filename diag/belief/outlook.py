@@ -12,7 +12,7 @@ from functools import cached_property
 import numpy as np
 
 from diag.belief.evidence import outcome_table
-from diag.belief.frame import Array, Frame, Indices, Transfer, state_chances, transfer
+from diag.belief.frame import Array, Frame, Indices, Transfer, World, state_chances, transfer
 from diag.belief.hypotheses import Posterior
 from diag.circuit.model import Observable
 
@@ -24,12 +24,17 @@ class Outlook:
     """Predictions from the weightiest hypotheses of a posterior.
 
     Attributes:
+        world: the rectifications done by now; predictions are made for after them.
         modes: (hypotheses, size) the hypotheses kept.
         weight: (hypotheses,) their probabilities, scaled to add up to one.
     """
 
-    def __init__(self, posterior: Posterior, keep: float = KEEP, most: int = MOST) -> None:
+    def __init__(
+        self, posterior: Posterior, world: World = (), keep: float = KEEP, most: int = MOST
+    ) -> None:
         self.posterior, self.frame = posterior, posterior.frame
+        self.world = world
+        self.table = self.frame.table(world)
         total = np.cumsum(posterior.weight)
         count = min(int(np.searchsorted(total, keep)) + 1, most, len(total))
         self.modes: Indices = posterior.modes[:count]
@@ -44,7 +49,7 @@ class Outlook:
         for k in range(used):
             rows = np.flatnonzero(self.modes[:, k] != self.frame.none)
             if len(rows):
-                product[rows] *= self.frame.cumulative[self.modes[rows, k]]
+                product[rows] *= self.table[self.modes[rows, k]]
         return product
 
     @cached_property
@@ -67,7 +72,7 @@ class Outlook:
                 cumulative[:, side.down],
                 cumulative[:, side.up],
                 side.normal,
-                _background(self.frame, node, self._aside),
+                _background(self.frame, self.table, node, self._aside),
             )
             self._states[node] = self._seen(node, chances)
         return self._states[node]
@@ -75,7 +80,7 @@ class Outlook:
     def _seen(self, node: str, chances: Array) -> Array:
         seen = False
         for sight in self.posterior.sights:
-            if sight.node == node:
+            if sight.node == node and sight.world == self.world:
                 seen = True
                 chances = chances * sight.table[sight.digit[self.modes].sum(axis=1)]
         if seen:
@@ -99,7 +104,11 @@ class Outlook:
             for name in observable.through
             if len(modes := frame.modes_of(name)) and not relevant[modes[0]]
         }
-        return transfer(frame, observable, fold) if fold else frame.through(observable)
+        return (
+            transfer(frame, observable, fold, self.world)
+            if fold
+            else frame.through(observable, self.world)
+        )
 
     def chances(self, observable: Observable) -> Array:
         """(outcomes,) P(outcome | findings)."""
@@ -141,11 +150,13 @@ def mean_plogp(p: Array, weight: Array) -> Array:
     return found
 
 
-def _background(frame: Frame, node: str, aside: list[tuple[Indices, Array]]) -> Array | None:
+def _background(
+    frame: Frame, table: Array, node: str, aside: list[tuple[Indices, Array]]
+) -> Array | None:
     """Expected product of cumulative chances of the components that take no part."""
     side = frame.sides[node]
     downs = side.down.stop - side.down.start
-    block = frame.cumulative[:, side.down.start : side.up.stop]
+    block = table[:, side.down.start : side.up.stop]
     total = np.ones((downs + 1, side.states - downs))
     for modes, prior in aside:
         rows = block[modes]

@@ -25,8 +25,10 @@ from diag.circuit.model import UNLISTED, Circuit
 from diag.errors import DiagError
 
 MAX_FAULTS = 6
-BEAM = 300
-TOLERANCE = 1e-5
+BEAM = 200
+TOLERANCE = 4e-5
+SPARE = 25.0
+"""Times the tolerance: share of a layer's weight that need not be grown further."""
 EXACT_BUDGET = 50_000
 """Terms of the closed sum that a step can afford."""
 _FLOOR = 1e-12
@@ -198,7 +200,7 @@ class _Search:
         while True:
             if layers[-1].modes.shape[1] >= min(self.max_faults, len(self.frame.components)):
                 break
-            grown = self._grow(layers[-1])
+            grown = self._grow(layers[-1], SPARE * tolerance)
             if grown is None:
                 self.complete = all(share >= 1.0 for share in self.expanded)
                 break
@@ -257,15 +259,15 @@ class _Search:
                     seen = seen * sight.table
                 else:
                     seen = seen * sight.table[signature(sight.digit)]
-            factor = np.maximum((states(view) * seen).sum(axis=-1), 0.0)
+            factor = np.maximum(_summed(states(view), seen), 0.0)
             with np.errstate(divide="ignore"):
                 true = true + np.log(factor)
             soft = soft + np.log(np.maximum(factor, _FLOOR))
         return true, soft
 
-    def _grow(self, layer: Layer) -> Layer | None:
+    def _grow(self, layer: Layer, spare: float) -> Layer | None:
         """All hypotheses with one mode more than the weightiest of `layer`."""
-        parents, share = self._parents(layer)
+        parents, share = self._parents(layer, spare)
         component = self.frame.component
         allowed = np.ones((len(parents), len(self.modes)), dtype=bool)
         for k in range(parents.shape[1]):
@@ -287,12 +289,17 @@ class _Search:
         )
         return self._layer(children, true, soft)
 
-    def _parents(self, layer: Layer) -> tuple[Indices, float]:
-        if len(layer.modes) <= self.beam:
+    def _parents(self, layer: Layer, spare: float) -> tuple[Indices, float]:
+        if not len(layer.modes):
             return layer.modes, 1.0
-        best = np.argpartition(-layer.score, self.beam)[: self.beam]
-        weight = np.exp(layer.score - layer.score.max())
-        return layer.modes[np.sort(best)], float(weight[best].sum() / weight.sum())
+        order = np.argsort(-layer.score, kind="stable")
+        weight = np.exp(layer.score[order] - layer.score[order[0]])
+        held = np.cumsum(weight) / weight.sum()
+        # A hypothesis passes on about as much weight as it has; the rest is not worth a look.
+        enough = int(np.searchsorted(held, 1.0 - spare)) + 1 if spare else len(order)
+        count = min(enough, self.beam, len(order))
+        share = 1.0 if count == len(order) else float(held[count - 1])
+        return layer.modes[np.sort(order[:count])], share
 
     def _child_states(self, view: View, parents: Indices, row: Indices, column: Indices) -> Array:
         frame, table = self.frame, self.frame.table(view[1])
@@ -304,6 +311,15 @@ class _Search:
         product = above[row] * table[self.modes[column], columns]
         split = side.down.stop - side.down.start
         return state_chances(product[:, :split], product[:, split:], side.normal)
+
+
+def _summed(states: Array, seen: Array) -> Array:
+    """(hypotheses,) sum over the states; one row of `seen` may serve all hypotheses."""
+    if seen.ndim == 1 or len(seen) == 1:
+        found: Array = states @ seen.reshape(-1)
+    else:
+        found = np.einsum("hs,hs->h", states, seen)
+    return found
 
 
 def _rows_with(modes: Indices, wanted: Indices) -> Indices:

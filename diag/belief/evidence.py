@@ -157,7 +157,8 @@ def state_likelihood(finding: Finding) -> Array:
     else:
         assert observable.record.scale is not None
         given = band_likelihood(observable.record.scale, observable.cuts, number)
-    return finding.trust * given + (1.0 - finding.trust) * given.mean()
+    trusted: Array = finding.trust * given + (1.0 - finding.trust) * given.mean()
+    return trusted
 
 
 def outcome_table(observable: Observable) -> Array:
@@ -188,7 +189,8 @@ def band_likelihood(scale: Scale, cuts: Iterable[float], number: float) -> Array
     edges = np.array([low, *cuts, high])
     below = np.array([_normal_cdf((number - edge) / sigma) for edge in edges])
     within = (below[:-1] - below[1:]) / np.diff(edges)
-    return (1.0 - MISREAD) * within + MISREAD / (high - low)
+    density: Array = (1.0 - MISREAD) * within + MISREAD / (high - low)
+    return density
 
 
 def _normal_cdf(z: float) -> float:

@@ -16,7 +16,6 @@ import numpy as np
 
 from diag.belief.frame import Array, Frame, Indices, World
 
-
 Sights = Mapping[tuple[str, World], Sequence[tuple[Indices, Array]]]
 """Node and world to its findings, each as (digit per mode, likelihood per signature)."""
 
@@ -33,12 +32,12 @@ def log_evidence(
         frame: the circuit.
         odds: (modes + 1,) prior odds.
         sights: the findings, by the condition they read.
-        budget: most terms × settings of instruments and promoting components.
+        budget: most terms × settings of instruments and promoting components × modes.
     """
     terms = math.prod(_size(frame, name) for name, _ in sights)
     fixed = _fixed(frame, sights)
     settings = math.prod(1 + len(frame.modes_of(c)) for c in fixed)
-    if terms * max(settings, len(frame.refs)) > budget:
+    if terms * settings * len(frame.refs) > budget:
         return None
     total = math.fsum(
         value
@@ -52,7 +51,7 @@ def log_evidence(
 def _size(frame: Frame, name: str) -> int:
     side = frame.sides[name]
     downs = side.down.stop - side.down.start
-    return (downs + 1) * (side.states - downs)
+    return int((downs + 1) * (side.states - downs))
 
 
 def _fixed(frame: Frame, sights: Sights) -> list[str]:

@@ -118,10 +118,8 @@ class Frame:
 
     def normaliser(self, odds: Array) -> Array:
         """(components,) one plus the odds of each component's modes."""
-        total: Array = np.bincount(
-            self.component[:-1], weights=odds[:-1], minlength=len(self.components)
-        )
-        return 1.0 + total
+        total = np.bincount(self.component[:-1], odds[:-1], len(self.components))
+        return 1.0 + total.astype(np.float64)
 
     @cached_property
     def coupled(self) -> Indices:

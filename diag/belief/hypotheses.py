@@ -25,12 +25,14 @@ from diag.circuit.model import UNLISTED, Circuit
 from diag.errors import DiagError
 
 MAX_FAULTS = 6
-BEAM = 200
-TOLERANCE = 4e-5
+BEAM = 300
+TOLERANCE = 2e-5
 SPARE = 25.0
 """Times the tolerance: share of a layer's weight that need not be grown further."""
-EXACT_BUDGET = 50_000
-"""Terms of the closed sum that a step can afford."""
+EXACT_BUDGET = 1_000_000
+"""Numbers in the closed sum that a step can afford."""
+PAIRS = 2
+"""Hypotheses up to this size are all weighed."""
 _FLOOR = 1e-12
 """Search keeps impossible hypotheses growable: a further mode may make them possible."""
 
@@ -79,7 +81,7 @@ class Layer:
 
 
 class Engine:
-    """Posterior of one circuit for any findings; caches what does not depend on them.
+    """Posterior of one circuit for any findings.
 
     Args:
         circuit: the circuit.
@@ -93,7 +95,6 @@ class Engine:
         self.circuit = circuit
         self.frame = Frame(circuit)
         self.odds = self.frame.odds(worked_on) if odds is None else odds
-        self._chances: dict[View, tuple[Array, Array, Array]] = {}
 
     @cached_property
     def normaliser(self) -> Array:
@@ -122,33 +123,6 @@ class Engine:
             found.append(Sight(node, finding.world, transfer.digit, table))
         return tuple(found)
 
-    @cached_property
-    def pairs(self) -> tuple[Indices, Indices]:
-        """All singles (modes, 1) and all pairs on different components (pairs, 2)."""
-        count = len(self.frame.refs)
-        first, second = np.triu_indices(count, 1)
-        apart = self.frame.component[first] != self.frame.component[second]
-        pairs = np.stack([first[apart], second[apart]], axis=1).astype(np.int64)
-        return np.arange(count, dtype=np.int64)[:, None], pairs
-
-    def chances(self, view: View) -> tuple[Array, Array, Array]:
-        """State chances of one node for the empty set (1, s), singles and pairs."""
-        if view not in self._chances:
-            none = np.zeros((1, 0), dtype=np.int64)
-            groups = (none, *self.pairs)
-            one, two, three = (self._states(view, modes) for modes in groups)
-            self._chances[view] = (one, two, three)
-        return self._chances[view]
-
-    def _states(self, view: View, modes: Indices) -> Array:
-        side, table = self.frame.sides[view[0]], self.frame.table(view[1])
-        columns = slice(side.down.start, side.up.stop)
-        product = np.repeat(self.frame.leak[None, columns], len(modes), axis=0)
-        for k in range(modes.shape[1]):
-            product *= table[modes[:, k], columns]
-        split = side.down.stop - side.down.start
-        return state_chances(product[:, :split], product[:, split:], side.normal)
-
     def posterior(
         self,
         findings: Sequence[Finding],
@@ -166,6 +140,63 @@ class Engine:
         return Posterior(self, tuple(findings), search.sights, search.relevant, layers, search)
 
 
+class _Scene:
+    """One condition in one world with all its findings, ready to be summed over its states.
+
+    Attributes:
+        touching: (modes + 1,) modes that move the condition or the instruments looking at it.
+    """
+
+    def __init__(self, frame: Frame, view: View, sights: Sequence[Sight]) -> None:
+        side = frame.sides[view[0]]
+        columns = slice(side.down.start, side.up.stop)
+        self.split = side.down.stop - side.down.start
+        self.normal = side.normal
+        self.leak = frame.leak[columns]
+        self.block = frame.table(view[1])[:, columns]
+        self.fixed = np.ones(side.states)
+        self.varied: list[Sight] = []
+        self.touching = (self.block < 1.0).any(axis=1)
+        for sight in sights:
+            if len(sight.table) == 1:
+                self.fixed = self.fixed * sight.table[0]
+            else:
+                self.varied.append(sight)
+                self.touching |= sight.digit > 0
+
+    def above(self, parents: Indices) -> tuple[Array, list[Indices]]:
+        """(parents, columns) cumulative chances, and the instruments' signatures."""
+        product = np.repeat(self.leak[None, :], len(parents), axis=0)
+        for k in range(parents.shape[1]):
+            product *= self.block[parents[:, k]]
+        return product, [sight.digit[parents].sum(axis=1) for sight in self.varied]
+
+    def children(
+        self, product: Array, signatures: list[Indices], modes: Indices
+    ) -> tuple[Array, list[Indices]]:
+        """The same with each of `modes` added: (parents, modes, columns)."""
+        grown = product[:, None, :] * self.block[modes][None, :, :]
+        added = [
+            signature[:, None] + sight.digit[modes][None, :]
+            for signature, sight in zip(signatures, self.varied, strict=True)
+        ]
+        return grown, added
+
+    def factor(self, product: Array, signatures: list[Indices]) -> Array:
+        """(…) P(findings of this condition | hypothesis)."""
+        down, up = product[..., : self.split], product[..., self.split :]
+        states = state_chances(down, up, self.normal)
+        if not signatures:
+            found: Array = states @ self.fixed
+        else:
+            seen = self.fixed
+            for sight, signature in zip(self.varied, signatures, strict=True):
+                # Two modes of one component add up to no signature; such sets are left out later.
+                seen = seen * sight.table.take(signature, axis=0, mode="clip")
+            found = np.einsum("...s,...s->...", states, seen)
+        return np.maximum(found, 0.0)
+
+
 class _Search:
     """Layer-wise growth of the hypotheses for one set of findings."""
 
@@ -180,6 +211,7 @@ class _Search:
             self.by_view.setdefault((sight.node, sight.world), []).append(sight)
         self.relevant = self._relevant()
         self.modes = np.flatnonzero(self.relevant[:-1] & (engine.odds[:-1] > 0))
+        self.scenes = [_Scene(self.frame, view, group) for view, group in self.by_view.items()]
         self.beam = beam
         self.max_faults = max_faults
         self.expanded: list[float] = []
@@ -195,11 +227,9 @@ class _Search:
         return self.frame.bearing_on({node for node, _ in self.by_view}, instruments)
 
     def run(self, tolerance: float) -> tuple[Layer, ...]:
-        layers = list(self._base())
-        total = np.logaddexp.reduce(np.concatenate([layer.log_joint for layer in layers]))
-        while True:
-            if layers[-1].modes.shape[1] >= min(self.max_faults, len(self.frame.components)):
-                break
+        layers = [self._empty()]
+        total = layers[0].log_joint[0]
+        while layers[-1].modes.shape[1] < self.max_faults:
             grown = self._grow(layers[-1], SPARE * tolerance)
             if grown is None:
                 self.complete = all(share >= 1.0 for share in self.expanded)
@@ -207,27 +237,18 @@ class _Search:
             layers.append(grown)
             added = np.logaddexp.reduce(grown.log_joint)
             total = np.logaddexp(total, added)
-            if np.isfinite(total) and added - total < np.log(tolerance or 1e-300):
+            small = np.isfinite(total) and added - total < np.log(tolerance or 1e-300)
+            if small and len(layers) > PAIRS:
                 break
         if not np.isfinite(total):
             raise Contradiction("the findings contradict each other: no cause allows all of them")
         return tuple(layers)
 
-    def _base(self) -> tuple[Layer, ...]:
-        singles, pairs = self.engine.pairs
-        keep = self.relevant & np.append(self.engine.odds[:-1] > 0, False)
-        rows = [np.array([True]), keep[singles[:, 0]], keep[pairs].all(axis=1)]
-        groups = (np.zeros((1, 0), dtype=np.int64), singles, pairs)
-        layers = []
-        for number, (modes, kept) in enumerate(zip(groups, rows, strict=True)):
-            kept_modes = modes[kept]
-            true, soft = self._likelihood(
-                len(kept_modes),
-                lambda view, n=number, k=kept: self.engine.chances(view)[n][k],
-                lambda digit, m=kept_modes: digit[m].sum(axis=1),
-            )
-            layers.append(self._layer(kept_modes, true, soft))
-        return tuple(layers)
+    def _empty(self) -> Layer:
+        modes = np.zeros((1, 0), dtype=np.int64)
+        factors = np.array([scene.factor(*scene.above(modes)) for scene in self.scenes])
+        true, soft = _logs(factors.reshape(len(self.scenes), 1))
+        return self._layer(modes, true.sum(axis=0), soft.sum(axis=0))
 
     def _layer(self, modes: Indices, true: Array, soft: Array) -> Layer:
         prior = self.log_prior(modes)
@@ -240,39 +261,23 @@ class _Search:
         base = -np.log(engine.normaliser[numbers]).sum()
         prior: Array = base + engine.log_odds[modes].sum(axis=1)
         table, promoters = self.frame.promotions
-        for row in _rows_with(modes, promoters):
-            present = np.isin(promoters, modes[row])
-            prior[row] += self._promoted(modes[row], table[present].sum(axis=0))
+        if not len(promoters) or not modes.size:
+            return prior
+        present = np.stack([(modes == p).any(axis=1) for p in promoters], axis=1)
+        rows = np.flatnonzero(present.any(axis=1))
+        patterns, which = np.unique(present[rows], axis=0, return_inverse=True)
+        for number, pattern in enumerate(patterns):
+            mine = rows[which == number]
+            factors = table[pattern].sum(axis=0)
+            raised = self.frame.normaliser(engine.odds * np.exp(factors))
+            shared = np.log(raised / engine.normaliser).sum()
+            prior[mine] += factors[modes[mine]].sum(axis=1) - shared
         return prior
-
-    def _promoted(self, modes: Indices, factors: Array) -> float:
-        """Change of the log prior when the odds are multiplied by exp(`factors`)."""
-        raised = self.frame.normaliser(self.engine.odds * np.exp(factors))
-        return float(factors[modes].sum() - np.log(raised / self.engine.normaliser).sum())
-
-    def _likelihood(self, count, states, signature) -> tuple[Array, Array]:  # type: ignore[no-untyped-def]
-        true, soft = np.zeros(count), np.zeros(count)
-        for view, sights in self.by_view.items():
-            seen = np.ones(1)
-            for sight in sights:
-                if len(sight.table) == 1:
-                    seen = seen * sight.table
-                else:
-                    seen = seen * sight.table[signature(sight.digit)]
-            factor = np.maximum(_summed(states(view), seen), 0.0)
-            with np.errstate(divide="ignore"):
-                true = true + np.log(factor)
-            soft = soft + np.log(np.maximum(factor, _FLOOR))
-        return true, soft
 
     def _grow(self, layer: Layer, spare: float) -> Layer | None:
         """All hypotheses with one mode more than the weightiest of `layer`."""
         parents, share = self._parents(layer, spare)
-        component = self.frame.component
-        allowed = np.ones((len(parents), len(self.modes)), dtype=bool)
-        for k in range(parents.shape[1]):
-            allowed &= component[parents[:, k]][:, None] != component[self.modes][None, :]
-        row, column = np.nonzero(allowed)
+        row, column = np.nonzero(self._apart(parents))
         if not len(row):
             return None
         self.expanded.append(share)
@@ -281,51 +286,53 @@ class _Search:
         for k in range(children.shape[1]):
             code = code * (self.frame.none + 1) + children[:, k]
         _, first = np.unique(code, return_index=True)
-        row, column, children = row[first], column[first], children[first]
-        true, soft = self._likelihood(
-            len(children),
-            lambda view: self._child_states(view, parents, row, column),
-            lambda digit: digit[children].sum(axis=1),
-        )
-        return self._layer(children, true, soft)
+        true, soft = self._likelihood(parents)
+        at = (row[first], column[first])
+        return self._layer(children[first], true[at], soft[at])
+
+    def _apart(self, parents: Indices) -> NDArray[np.bool_]:
+        """(parents, modes) whether the mode sits on a component that the parent leaves sound."""
+        component = self.frame.component
+        apart = np.ones((len(parents), len(self.modes)), dtype=bool)
+        for k in range(parents.shape[1]):
+            apart &= component[parents[:, k]][:, None] != component[self.modes][None, :]
+        return apart
+
+    def _likelihood(self, parents: Indices) -> tuple[Array, Array]:
+        """(parents, modes) log P(findings | parent and mode), and the same softened.
+
+        A mode that leaves a condition and its instruments alone leaves the parent's factor
+        as it is, so only the modes that touch a condition are summed there.
+        """
+        true = np.zeros((len(parents), len(self.modes)))
+        soft = np.zeros_like(true)
+        for scene in self.scenes:
+            touching = np.flatnonzero(scene.touching[self.modes])
+            above = scene.above(parents)
+            own = scene.factor(*above)
+            factor = np.repeat(own[:, None], len(self.modes), axis=1)
+            factor[:, touching] = scene.factor(*scene.children(*above, self.modes[touching]))
+            logs = _logs(factor)
+            true += logs[0]
+            soft += logs[1]
+        return true, soft
 
     def _parents(self, layer: Layer, spare: float) -> tuple[Indices, float]:
-        if not len(layer.modes):
-            return layer.modes, 1.0
         order = np.argsort(-layer.score, kind="stable")
         weight = np.exp(layer.score[order] - layer.score[order[0]])
         held = np.cumsum(weight) / weight.sum()
         # A hypothesis passes on about as much weight as it has; the rest is not worth a look.
         enough = int(np.searchsorted(held, 1.0 - spare)) + 1 if spare else len(order)
-        count = min(enough, self.beam, len(order))
+        # All singles are grown: two faults together may explain what neither does alone.
+        count = len(order) if layer.modes.shape[1] < PAIRS else min(enough, self.beam, len(order))
         share = 1.0 if count == len(order) else float(held[count - 1])
         return layer.modes[np.sort(order[:count])], share
 
-    def _child_states(self, view: View, parents: Indices, row: Indices, column: Indices) -> Array:
-        frame, table = self.frame, self.frame.table(view[1])
-        side = frame.sides[view[0]]
-        columns = slice(side.down.start, side.up.stop)
-        above = np.repeat(frame.leak[None, columns], len(parents), axis=0)
-        for k in range(parents.shape[1]):
-            above *= table[parents[:, k], columns]
-        product = above[row] * table[self.modes[column], columns]
-        split = side.down.stop - side.down.start
-        return state_chances(product[:, :split], product[:, split:], side.normal)
 
-
-def _summed(states: Array, seen: Array) -> Array:
-    """(hypotheses,) sum over the states; one row of `seen` may serve all hypotheses."""
-    if seen.ndim == 1 or len(seen) == 1:
-        found: Array = states @ seen.reshape(-1)
-    else:
-        found = np.einsum("hs,hs->h", states, seen)
-    return found
-
-
-def _rows_with(modes: Indices, wanted: Indices) -> Indices:
-    if not len(wanted) or not modes.size:
-        return np.zeros(0, dtype=np.int64)
-    return np.flatnonzero(np.isin(modes, wanted).any(axis=1))
+def _logs(factor: Array) -> tuple[Array, Array]:
+    """Log of a factor, and of the factor kept above the floor of the search."""
+    with np.errstate(divide="ignore"):
+        return np.log(factor), np.log(np.maximum(factor, _FLOOR))
 
 
 class Posterior:
@@ -420,7 +427,7 @@ def _estimated(layers: Sequence[Layer], search: _Search) -> Coverage:
     total = np.logaddexp.reduce(np.concatenate([layer.log_joint for layer in layers]))
     share = [float(np.exp(np.logaddexp.reduce(la.log_joint) - total)) for la in layers]
     rest = 0.0
-    for depth, expanded in enumerate(search.expanded, start=2):
+    for depth, expanded in enumerate(search.expanded):
         rest += share[depth + 1] * (1.0 - expanded) / max(expanded, 1e-9)
     ratio = min(share[-1] / max(share[-2], 1e-300), 0.5)
     rest += share[-1] * ratio / (1.0 - ratio)

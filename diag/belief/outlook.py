@@ -92,9 +92,11 @@ class Outlook:
         states, table = self.states(observable.node), outcome_table(observable)
         passed = self._transfer(observable)
         if len(passed.matrices) == 1:
-            return states @ (passed.matrices[0] @ table)
-        signature = passed.digit[self.modes].sum(axis=1)
-        return np.einsum("hs,hso->ho", states, (passed.matrices @ table)[signature])
+            found: Array = states @ (passed.matrices[0] @ table)
+        else:
+            signature = passed.digit[self.modes].sum(axis=1)
+            found = np.einsum("hs,hso->ho", states, (passed.matrices @ table)[signature])
+        return found
 
     def _transfer(self, observable: Observable) -> Transfer:
         """As the frame's, with instruments that take no part averaged over."""
@@ -119,10 +121,11 @@ class Outlook:
         """(modes,) probability of each mode that takes part, if `outcome` were found."""
         joint = self.weight * self.answers(observable)[:, outcome]
         size = self.modes.shape[1]
-        found: Array = np.bincount(
+        total: Array = np.bincount(
             self.modes.ravel(), weights=np.repeat(joint, size), minlength=self.frame.none + 1
-        )[:-1]
-        return found / max(joint.sum(), 1e-300)
+        ).astype(np.float64)
+        found: Array = total[:-1] / max(float(joint.sum()), 1e-300)
+        return found
 
     def information(self, observables: Iterable[Observable]) -> Array:
         """(observables,) bits that each is expected to tell about the hypotheses."""

@@ -1,0 +1,416 @@
+"""The session: a fold over events, and what follows from the state it reaches.
+
+Nothing here knows a clock, a file or a screen. A front end sends events and renders what
+comes back; the findings log is the list of those events.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from datetime import datetime
+from functools import cached_property
+from typing import Any
+
+from diag.advice.steps import NOTICE, NextStep, Place, next_steps
+from diag.belief.conflict import conflict_bits
+from diag.belief.evidence import Finding, make_finding
+from diag.belief.frame import World
+from diag.belief.hypotheses import Engine, Posterior
+from diag.belief.outlook import Outlook
+from diag.circuit.model import UNLISTED, Circuit
+from diag.errors import UnknownName, UsageError
+from diag.record.events import (
+    AnyEvent,
+    Closed,
+    Doubted,
+    Found,
+    NotPossible,
+    Opened,
+    Rectified,
+    Standing,
+    StateChanged,
+    Withdrawn,
+)
+from diag.record.narrate import NOTHING, cause_title
+
+TOP = 5
+"""Causes kept in a standing."""
+
+
+@dataclass(frozen=True, slots=True)
+class Taken:
+    """A finding of the case: which event brought it, and what it says."""
+
+    number: int
+    finding: Finding
+    complaint: bool
+    superseded: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class CaseState:
+    """Where a case stands after its events.
+
+    Attributes:
+        events: everything that happened, withdrawn or not.
+        taken: findings that were not withdrawn, in the order in which they came.
+        not_possible: steps that cannot be done.
+        world: modes restored so far, each with the chance that it worked.
+        unproven: rectifications done whose verification is still open.
+    """
+
+    circuit: Circuit
+    events: tuple[AnyEvent, ...] = ()
+    opened: Opened | None = None
+    taken: tuple[Taken, ...] = ()
+    not_possible: frozenset[str] = frozenset()
+    place: Place = field(default_factory=Place)
+    world: World = ()
+    rectified: tuple[Rectified, ...] = ()
+    unproven: tuple[str, ...] = ()
+    closed: Closed | None = None
+
+    @property
+    def findings(self) -> tuple[Finding, ...]:
+        """Findings that count: neither withdrawn nor superseded."""
+        return tuple(t.finding for t in self.taken if not t.superseded)
+
+    @property
+    def done(self) -> set[str]:
+        """Steps that need not be proposed: taken since the last rectification, or impossible."""
+        keys = {t.finding.key for t in self.taken if t.finding.world == self.world}
+        return keys | self.not_possible
+
+    @property
+    def undoable(self) -> AnyEvent | None:
+        """The latest event that can be taken back."""
+        gone = {e.target for e in self.events if isinstance(e, Withdrawn)}
+        kinds = (Found, Doubted, NotPossible, StateChanged, Rectified)
+        live = (e for e in reversed(self.events) if isinstance(e, kinds) and e.number not in gone)
+        return next(live, None)
+
+
+def fold(circuit: Circuit, events: Iterable[AnyEvent]) -> CaseState:
+    """The state after `events`.
+
+    Raises:
+        UsageError: an event does not fit the state it meets; names the event.
+        UnknownName: an event names something that the circuit does not have.
+    """
+    state = CaseState(circuit)
+    for event in events:
+        state = advance(state, event)
+    return state
+
+
+def advance(state: CaseState, event: AnyEvent) -> CaseState:
+    """The state after one more event; see `fold` for what it raises."""
+    if state.closed is not None:
+        raise UsageError("the case is closed; nothing can be added")
+    if (state.opened is None) != isinstance(event, Opened):
+        raise UsageError("a case begins with its opening, once")
+    if isinstance(event, Withdrawn):
+        after = _without(state, event)
+    else:
+        after = _STEPS[type(event)](state, event) if type(event) in _STEPS else state
+    return replace(after, events=(*state.events, event))
+
+
+def _opened(state: CaseState, event: Opened) -> CaseState:
+    for name in event.worked_on:
+        if name not in state.circuit.components:
+            raise UnknownName("component", name, state.circuit.components)
+    return replace(state, opened=event)
+
+
+def _found(state: CaseState, event: Found) -> CaseState:
+    observable = state.circuit.observable(event.name, event.point)
+    finding = replace(make_finding(observable, event.value), world=state.world)
+    taken = tuple(
+        replace(t, superseded=True)
+        if t.finding.key == finding.key and t.finding.world == finding.world
+        else t
+        for t in state.taken
+    )
+    proven = tuple(v for v in state.unproven if v != finding.key)
+    new = Taken(event.number, finding, event.complaint)
+    return replace(state, taken=(*taken, new), unproven=proven)
+
+
+def _doubted(state: CaseState, event: Doubted) -> CaseState:
+    if all(t.number != event.target for t in state.taken):
+        raise UsageError(f"event {event.target} is not a finding that counts")
+    taken = tuple(
+        replace(t, finding=replace(t.finding, trust=event.trust)) if t.number == event.target else t
+        for t in state.taken
+    )
+    return replace(state, taken=taken)
+
+
+def _not_possible(state: CaseState, event: NotPossible) -> CaseState:
+    known = (*state.circuit.observables, *state.circuit.remedies)
+    if event.step not in known:
+        raise UnknownName("step", event.step, known)
+    return replace(state, not_possible=state.not_possible | {event.step})
+
+
+def _state_changed(state: CaseState, event: StateChanged) -> CaseState:
+    circuit = state.circuit
+    engine = event.engine or state.place.engine
+    if engine not in circuit.engine_states:
+        raise UnknownName("engine state", engine, circuit.engine_states)
+    for name in (*event.opened, *event.closed):
+        if name not in circuit.openings:
+            raise UnknownName("opening", name, circuit.openings)
+    opened = (state.place.opened | set(event.opened)) - set(event.closed)
+    return replace(state, place=Place(engine, opened))
+
+
+def _rectified(state: CaseState, event: Rectified) -> CaseState:
+    remedies = state.circuit.remedies
+    if event.rectification not in remedies:
+        raise UnknownName("rectification", event.rectification, remedies)
+    remedy = remedies[event.rectification]
+    restored = tuple((ref, remedy.record.success) for ref in remedy.restores)
+    return replace(
+        state,
+        world=(*state.world, *restored),
+        rectified=(*state.rectified, event),
+        unproven=(*state.unproven, remedy.record.verify),
+    )
+
+
+def _closed(state: CaseState, event: Closed) -> CaseState:
+    if event.outcome == "cause_confirmed" and not event.causes:
+        raise UsageError("closing with a confirmed cause needs the cause")
+    modes = state.circuit.modes
+    for ref in event.causes:
+        if ref not in modes and ref != UNLISTED:
+            raise UnknownName("cause", ref, (*modes, UNLISTED))
+    if event.verification is None and not event.not_verified_because.strip():
+        raise UsageError("closing needs a verification finding, or the statement why none was done")
+    if event.verification is not None:
+        _check_verification(state, event.verification)
+    return replace(state, closed=event)
+
+
+def _check_verification(state: CaseState, number: int) -> None:
+    proof = next((t for t in state.taken if t.number == number), None)
+    if proof is None:
+        raise UsageError(f"event {number} is not a finding of this case")
+    if proof.superseded or proof.finding.world != state.world:
+        raise UsageError(f"finding {number} was taken before the last rectification")
+
+
+def _without(state: CaseState, event: Withdrawn) -> CaseState:
+    """The state as if the target had never happened."""
+    taken_back = {e.target for e in state.events if isinstance(e, Withdrawn)}
+    target = next((e for e in state.events if e.number == event.target), None)
+    fixed = (Opened, Withdrawn, Closed)
+    if target is None or isinstance(target, fixed) or event.target in taken_back:
+        raise UsageError(f"event {event.target} cannot be withdrawn")
+    gone = taken_back | {event.target}
+    doubts = {e.number for e in state.events if isinstance(e, Doubted) and e.target in gone}
+    kept = [
+        e
+        for e in state.events
+        if not isinstance(e, Withdrawn) and e.number not in gone and e.number not in doubts
+    ]
+    return fold(state.circuit, kept)
+
+
+_STEPS: Mapping[type, Callable[[CaseState, Any], CaseState]] = {
+    Opened: _opened,
+    Found: _found,
+    Doubted: _doubted,
+    NotPossible: _not_possible,
+    StateChanged: _state_changed,
+    Rectified: _rectified,
+    Closed: _closed,
+}
+
+
+class Assessment:
+    """What the findings of one state mean: causes, hypotheses and the next steps.
+
+    Args:
+        posterior: of the findings of the case.
+        state: the case.
+    """
+
+    def __init__(self, posterior: Posterior, state: CaseState) -> None:
+        self.posterior, self.state = posterior, state
+        self.circuit = state.circuit
+
+    @cached_property
+    def outlook(self) -> Outlook:
+        return Outlook(self.posterior, self.state.world)
+
+    @cached_property
+    def marginals(self) -> dict[str, float]:
+        """Probability of each mode at the time of the complaint."""
+        return dict(zip(self.posterior.frame.refs, self.posterior.marginals.tolist(), strict=True))
+
+    @cached_property
+    def present(self) -> dict[str, float]:
+        """Probability that each mode is still there, after the rectifications done."""
+        found = dict(self.marginals)
+        for ref, success in self.state.world:
+            found[ref] *= 1.0 - success
+        return found
+
+    @property
+    def unlisted(self) -> float:
+        return self.posterior.unlisted
+
+    @cached_property
+    def standing(self) -> Standing:
+        """The top causes, the unlisted cause and "nothing found" among them."""
+        rows = [*self.marginals.items(), (NOTHING, self.posterior.nothing_wrong)]
+        rows.sort(key=lambda row: (-row[1], row[0]))
+        causes = tuple((ref, round(p, 6)) for ref, p in rows[:TOP])
+        return Standing(causes=causes, coverage=round(self.posterior.coverage.value, 8))
+
+    @cached_property
+    def steps(self) -> list[NextStep]:
+        """Steps in the order in which they are proposed."""
+        return next_steps(
+            self.circuit,
+            self.outlook,
+            self.present,
+            self.state.place,
+            self.state.done,
+            self.state.unproven,
+            recalled=not self.state.world,
+        )
+
+    @cached_property
+    def conflict_bits(self) -> float:
+        """How badly the findings hang together; positive is conflict."""
+        return conflict_bits(self.posterior)
+
+
+class Session:
+    """One case in memory: its state, its assessment and the way to add events.
+
+    Args:
+        circuit: the circuit of the case.
+        save: called with each event before it counts; a findings log, or None.
+    """
+
+    def __init__(self, circuit: Circuit, save: Callable[[AnyEvent], None] | None = None) -> None:
+        self.circuit = circuit
+        self.state = CaseState(circuit)
+        self._save = save
+        self._engines: dict[tuple[str, ...], Engine] = {}
+        self._posteriors: dict[tuple[object, ...], Posterior] = {}
+        self._assessed: Assessment | None = None
+
+    @classmethod
+    def replay(
+        cls,
+        circuit: Circuit,
+        events: Sequence[AnyEvent],
+        save: Callable[[AnyEvent], None] | None = None,
+    ) -> Session:
+        """A session carried on from the events of a log, exactly where it stopped."""
+        session = cls(circuit, save)
+        session.state = fold(circuit, events)
+        return session
+
+    def _engine(self, worked_on: tuple[str, ...]) -> Engine:
+        if worked_on not in self._engines:
+            self._engines[worked_on] = Engine(self.circuit, worked_on)
+        return self._engines[worked_on]
+
+    @property
+    def assessment(self) -> Assessment:
+        """What the findings mean now; computed once per state."""
+        if self._assessed is None or self._assessed.state is not self.state:
+            self._assessed = self._assess(self.state)
+        return self._assessed
+
+    def _assess(self, state: CaseState) -> Assessment:
+        worked_on = state.opened.worked_on if state.opened else ()
+        key = (worked_on, *((f.key, f.value, f.trust, f.world) for f in state.findings))
+        if key not in self._posteriors:
+            made = self._engine(worked_on).posterior(state.findings)
+            self._posteriors = {key: made}
+        return Assessment(self._posteriors[key], state)
+
+    def add(self, event: AnyEvent) -> AnyEvent:
+        """Adds one event: checked, weighed, saved, and only then acknowledged.
+
+        Raises:
+            UsageError, UnknownName: the event does not fit; the case is unchanged.
+            Contradiction: no cause allows the findings together; the case is unchanged.
+            JournalError: the event is part of the case in memory but could not be saved.
+        """
+        before = self.assessment.standing if self.state.opened else None
+        numbered = event.model_copy(update={"number": len(self.state.events), "before": before})
+        after = self._assess(advance(self.state, numbered)).standing
+        full = numbered.model_copy(update={"after": after})
+        self.state = advance(self.state, full)
+        if self._save is not None:
+            self._save(full)
+        return full
+
+    def find(self, at: datetime, name: str, point: str | None, value: str, **more: Any) -> AnyEvent:
+        """Adds a finding; `more` as in `Found`."""
+        return self.add(Found(at=at, name=name, point=point, value=value, **more))
+
+    def undo(self, at: datetime, by: str = "") -> AnyEvent | None:
+        """Takes back the latest event that can be, or None when there is none."""
+        last = self.state.undoable
+        if last is None:
+            return None
+        self.add(Withdrawn(at=at, by=by, target=last.number, reason="undo"))
+        return last
+
+
+def ranking(assessment: Assessment, count: int = 10, steps: int = 5) -> dict[str, Any]:
+    """The ranking as plain data: the shape of `rank --json`."""
+    circuit, posterior = assessment.circuit, assessment.posterior
+    modes = circuit.modes
+    return {
+        "circuit": circuit.id,
+        "version": circuit.file.version,
+        "findings": [str(f) for f in posterior.findings],
+        "causes": [
+            {
+                "component": modes[ref].component,
+                "mode": ref.split(".")[1],
+                "title": cause_title(circuit, ref),
+                "probability": p,
+            }
+            for ref, p in posterior.causes()[:count]
+        ],
+        "hypotheses": [
+            {"faults": list(faults), "probability": p}
+            for faults, p in posterior.hypotheses(min(count, len(posterior.weight)))
+        ],
+        "unlisted": posterior.unlisted,
+        "nothing_found": posterior.nothing_wrong,
+        "coverage": posterior.coverage.value,
+        "coverage_method": posterior.coverage.method,
+        "conflict_bits": assessment.conflict_bits,
+        "next": [step_data(step) for step in assessment.steps[:steps]],
+        "notice": NOTICE,
+    }
+
+
+def step_data(step: NextStep) -> dict[str, Any]:
+    """One next step as plain data."""
+    return {
+        "step": step.id,
+        "kind": step.kind,
+        "title": step.title,
+        "minutes": step.minutes,
+        "expected_minutes": step.expected_minutes,
+        "information_bits": step.information_bits,
+        "probability": step.probability,
+        "needs": list(step.needs),
+        "cautions": list(step.cautions),
+        "reference": step.reference,
+    }

@@ -391,7 +391,8 @@ def _ask(prompt: str) -> str:
     line = sys.stdin.readline()
     if not line:
         raise EOFError
-    return line.rstrip("\n")
+    # A key that sends an escape sequence must not end up in the record.
+    return "".join(c for c in line if c.isprintable())
 
 
 def _default_log(circuit: Circuit) -> Path:

@@ -148,7 +148,7 @@ class PlainSession:
         self.say("One a line; an empty line ends it.")
         words: list[str] = []
         findings: list[str] = []
-        while line := self.ask("complaint> ").strip():
+        while line := self._read("complaint> "):
             if "=" not in line:
                 words.append(line)
                 continue
@@ -163,10 +163,16 @@ class PlainSession:
         try:
             while self.session.state.closed is None:
                 step = self._offer()
-                while not self._answer(step, self.ask("answer> ").strip()):
+                while not self._answer(step, self._read("answer> ")):
                     pass
         except _Stop:
             return
+
+    def _read(self, prompt: str) -> str:
+        """One line; lines that begin with # are remarks in a prepared file of answers."""
+        while (line := self.ask(prompt).strip()).startswith("#"):
+            pass
+        return line
 
     def _offer(self) -> NextStep:
         """Shows the causes and the next step."""
@@ -346,8 +352,8 @@ class PlainSession:
         known = self.circuit.remedies
         if plain_id(name) not in known:
             raise UnknownName("rectification", name, known)
-        off = self.ask("part off, serial (Enter if none)> ").strip()
-        on = self.ask("part on, serial (Enter if none)> ").strip()
+        off = self._read("part off, serial (Enter if none)> ")
+        on = self._read("part on, serial (Enter if none)> ")
         self._record(
             Rectified(
                 at=self.now(),
@@ -382,7 +388,7 @@ class PlainSession:
             "2": "no_fault_found",
             "3": "handed_to_engineering",
         }
-        choice = self.ask("outcome> ").strip()
+        choice = self._read("outcome> ")
         if not choice:
             return
         if choice not in outcomes:
@@ -412,7 +418,10 @@ class PlainSession:
         fresh = [t for t in state.taken if t.finding.world == state.world and not t.superseded]
         for taken in fresh[-5:]:
             self.say(f"  {taken.number:>3}  {taken.finding}")
-        answer = self.ask("verified by finding number, or why it was not verified> ").strip()
+        answer = self.ask("verified by finding (number or name), or why it was not verified> ").strip()
+        named = {t.finding.key: t.number for t in fresh}
+        if answer in named:
+            return named[answer], ""
         return (int(answer), "") if answer.isdigit() else (None, answer)
 
 

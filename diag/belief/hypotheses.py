@@ -31,6 +31,8 @@ SPARE = 25.0
 """Times the tolerance: share of a layer's weight that need not be grown further."""
 EXACT_BUDGET = 1_000_000
 """Numbers in the closed sum that a step can afford."""
+_NEGLIGIBLE = np.log(1e-14)
+"""Log share below which a hypothesis is not kept."""
 PAIRS = 2
 """Hypotheses up to this size are all weighed."""
 _FLOOR = 1e-12
@@ -228,19 +230,17 @@ class _Search:
 
     def run(self, tolerance: float) -> tuple[Layer, ...]:
         layers = [self._empty()]
-        total = layers[0].log_joint[0]
+        sums = [float(layers[0].log_joint[0])]
         while layers[-1].modes.shape[1] < self.max_faults:
             grown = self._grow(layers[-1], SPARE * tolerance)
             if grown is None:
                 self.complete = all(share >= 1.0 for share in self.expanded)
                 break
             layers.append(grown)
-            added = np.logaddexp.reduce(grown.log_joint)
-            total = np.logaddexp(total, added)
-            small = np.isfinite(total) and added - total < np.log(tolerance or 1e-300)
-            if small and len(layers) > PAIRS:
+            sums.append(float(np.logaddexp.reduce(grown.log_joint)))
+            if len(layers) > PAIRS and _expected_next(sums) < tolerance:
                 break
-        if not np.isfinite(total):
+        if not np.isfinite(np.logaddexp.reduce(sums)):
             raise Contradiction("the findings contradict each other: no cause allows all of them")
         return tuple(layers)
 
@@ -318,15 +318,31 @@ class _Search:
         return true, soft
 
     def _parents(self, layer: Layer, spare: float) -> tuple[Indices, float]:
-        order = np.argsort(-layer.score, kind="stable")
-        weight = np.exp(layer.score[order] - layer.score[order[0]])
-        held = np.cumsum(weight) / weight.sum()
-        # A hypothesis passes on about as much weight as it has; the rest is not worth a look.
-        enough = int(np.searchsorted(held, 1.0 - spare)) + 1 if spare else len(order)
         # All singles are grown: two faults together may explain what neither does alone.
-        count = len(order) if layer.modes.shape[1] < PAIRS else min(enough, self.beam, len(order))
-        share = 1.0 if count == len(order) else float(held[count - 1])
-        return layer.modes[np.sort(order[:count])], share
+        if layer.modes.shape[1] < PAIRS or len(layer.modes) <= (1 if spare else self.beam):
+            return layer.modes, 1.0
+        weight = np.exp(layer.score - layer.score.max())
+        best = np.argpartition(-weight, min(self.beam, len(weight) - 1))[: self.beam]
+        best = best[np.lexsort((best, -weight[best]))]
+        held = np.cumsum(weight[best]) / weight.sum()
+        # A hypothesis passes on about as much weight as it has; the rest is not worth a look.
+        count = int(np.searchsorted(held, 1.0 - spare)) + 1 if spare else len(best)
+        best = best[:count]
+        share = 1.0 if len(best) == len(weight) else float(held[len(best) - 1])
+        return layer.modes[np.sort(best)], share
+
+
+def _expected_next(sums: Sequence[float]) -> float:
+    """Share that the next layer would add if the layers go on shrinking as they do.
+
+    Args:
+        sums: log weight of each layer so far.
+    """
+    total = np.logaddexp.reduce(sums)
+    if not np.isfinite(total):
+        return 1.0
+    before, last = (float(np.exp(s - total)) for s in sums[-2:])
+    return last * min(last / max(before, 1e-300), 0.5)
 
 
 def _logs(factor: Array) -> tuple[Array, Array]:
@@ -360,8 +376,8 @@ class Posterior:
         padded = [_padded(layer.modes, size, self.frame.none) for layer in layers]
         joint = np.concatenate([layer.log_joint for layer in layers])
         self.log_evidence = float(np.logaddexp.reduce(joint))
-        order = np.argsort(-joint, kind="stable")
-        order = order[np.isfinite(joint[order])]
+        kept = np.flatnonzero(joint > self.log_evidence + _NEGLIGIBLE)
+        order = kept[np.argsort(-joint[kept], kind="stable")]
         self.modes = np.concatenate(padded)[order]
         self.weight = np.exp(joint[order] - self.log_evidence)
         self.coverage = _coverage(self.log_evidence, layers, search)

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
-from difflib import get_close_matches
-from typing import Any, TypeAlias, TypeVar
+from typing import Any, TypeAlias
 
-from pydantic import ValidationError
-
+from diag.circuit.causes import EffectTable, with_promotions
+from diag.circuit.faults import Faults
 from diag.circuit.model import (
     UNLISTED,
     Circuit,
@@ -19,30 +18,30 @@ from diag.circuit.model import (
     Remedy,
     mode_probability,
 )
-from diag.circuit.reading import brief, dotted
+from diag.circuit.overlays import Overlays
 from diag.circuit.records import (
-    Based,
     CautionsFile,
     Check,
     CircuitFile,
     ComponentUse,
     Condition,
     ConditionsFile,
-    Effect,
     Indication,
     Kind,
     LinksFile,
+    ModeRecord,
     ObservationsFile,
     Overlay,
+    Rate,
     Record,
     Rectification,
     SharedConditionsFile,
     SourcesFile,
     Step,
 )
-from diag.errors import Origin, Problem
+from diag.circuit.references import REFERENCE_CHECKS, Named
+from diag.errors import Origin
 
-R = TypeVar("R", bound=Record)
 Observation: TypeAlias = Indication | Check
 
 
@@ -59,352 +58,230 @@ class Parts:
     overlays: list[Overlay]
     kinds: dict[str, Kind] = field(default_factory=dict)
 
+    def records(self) -> Iterator[Record]:
+        """Every file, as its record."""
+        files = (self.shared_conditions, self.shared_checks, self.cautions, self.sources)
+        yield from (file for file in files if file is not None)
+        yield from (*self.links, *self.observations, *self.overlays, *self.kinds.values())
+
 
 class Assembly:
-    """Builds a `Circuit`; every fault lands in `problems`."""
+    """Builds a `Circuit`; every fault it meets lands in `faults`."""
 
     def __init__(
-        self, head: CircuitFile, conditions: ConditionsFile, parts: Parts, content_hash: str
+        self,
+        head: CircuitFile,
+        conditions: ConditionsFile,
+        parts: Parts,
+        content_hash: str,
+        faults: Faults,
     ) -> None:
-        self.head = head
         self.conditions_file = conditions
         self.parts = parts
         self.content_hash = content_hash
-        self.problems: list[Problem] = []
+        self.faults = faults
+        self.overlays = Overlays(parts.overlays, head.id, faults)
+        self.head = self.overlays.head(head)
         shared = parts.shared_conditions
         self.shared = {c.id: c for c in shared.conditions} if shared else {}
+        self.declared = {use.id for use in head.components}
+        doubtful = (use.id for use in head.components if f"kind:{use.kind}" in faults.unsure)
+        faults.unsure |= {f"component:{name}" for name in doubtful}
 
     def circuit(self) -> Circuit:
         """The circuit as far as it could be built; usable only without problems."""
-        self._unique((c.id, c.where) for c in self.head.components)
-        self.head = self._overlaid_head()
+        self._unique_ids()
         components = self._components()
-        records = self._conditions(components)
+        records = self._conditions()
         observations = self._observations(components, records)
         nodes = self._nodes(components, records)
-        observables = self._observables(observations, nodes, components)
+        observables = self._observables(observations, nodes)
         remedies = self._remedies(components, observables)
-        self._check_cautions([*observations, *(r.record for r in remedies.values())])
-        self._check_sources(components, nodes)
-        return Circuit(
+        cautions, sources = self.parts.cautions, self.parts.sources
+        circuit = Circuit(
             file=self.head,
             components=components,
             nodes=nodes,
             observables=observables,
             remedies=remedies,
-            cautions=self._caution_texts(),
-            sources=self.parts.sources.sources if self.parts.sources else {},
-            overlays=tuple(o.overlay for o in self.parts.overlays),
+            cautions={c.id: c.text for c in cautions.cautions} if cautions else {},
+            sources=sources.sources if sources else {},
+            overlays=tuple(o.overlay for o in self.overlays.given),
             content_hash=self.content_hash,
         )
+        self._check_references(circuit, observations)
+        return circuit
 
-    # -- problems ---------------------------------------------------------------------
+    def _unique_ids(self) -> None:
+        head, parts = self.head, self.parts
+        for table in (head.components, head.openings, head.engine_states, self._own_conditions()):
+            self.faults.unique(table)
+        self.faults.unique(parts.shared_conditions.conditions if parts.shared_conditions else ())
+        self.faults.unique(parts.cautions.cautions if parts.cautions else ())
+        for kind in parts.kinds.values():
+            self.faults.unique((*kind.modes, *kind.checks, *kind.rectifications))
 
-    def fault(self, where: Origin, path: str, message: str, known: Iterable[str] = ()) -> None:
-        """Notes a problem; `known` names are narrowed to the nearest."""
-        names = list(known)
-        value = path.rsplit(".", 1)[-1]
-        near = get_close_matches(value, names, n=3, cutoff=0.5) or names[:8]
-        self.problems.append(Problem(where, path, message, accepted=", ".join(near)))
+    def _own_conditions(self) -> tuple[Any, ...]:
+        return (*self.conditions_file.use, *self.conditions_file.conditions)
 
-    def _unique(self, ids: Iterable[tuple[str, Origin]]) -> None:
-        seen: dict[str, Origin] = {}
-        for name, where in ids:
-            if name in seen:
-                self.fault(where, name, f"id {name} stands twice, first at {seen[name]}")
-            seen.setdefault(name, where)
-
-    # -- overlays ---------------------------------------------------------------------
-
-    def _changes(self, table: str, name: str) -> list[tuple[Overlay, Mapping[str, Any]]]:
-        found = []
-        for overlay in self.parts.overlays:
-            if overlay.circuit not in (None, self.head.id):
-                continue
-            changes: Mapping[str, Any] = getattr(overlay, table)
-            if name in changes:
-                found.append((overlay, changes[name]))
-        return found
-
-    def _changed(self, record: R, table: str, name: str) -> R:
-        """`record` with the overlays' fields laid over it, checked anew."""
-        for overlay, fields in self._changes(table, name):
-            record = self._revised(record, fields, overlay, f"{table}.{name}")
-        return record
-
-    def _revised(self, record: R, fields: Mapping[str, Any], overlay: Overlay, path: str) -> R:
-        old = record.model_dump(exclude={"kind"})
-        merged = _merged(old, fields)
-        if isinstance(record, Based):
-            merged["basis"] = fields.get("basis", overlay.basis)
-        where = getattr(fields, "origin", overlay.where)
-        try:
-            return type(record).model_validate({**merged, "where": record.where})
-        except ValidationError as error:
-            for fault in error.errors(include_url=False):
-                place = f"{path}.{dotted(fault['loc'])}"
-                message = str(fault["msg"]).removeprefix("Value error, ")
-                self.problems.append(Problem(where, place, message, brief(fault["input"])))
-            return record
-
-    def _overlaid_head(self) -> CircuitFile:
-        head = self.head
-        states = tuple(self._changed(s, "engine_states", s.id) for s in head.engine_states)
-        openings = tuple(self._changed(o, "openings", o.id) for o in head.openings)
-        update: dict[str, Any] = {"engine_states": states, "openings": openings}
-        for name in ("costs", "exposure", "unlisted"):
-            record = getattr(head, name)
-            for overlay in self.parts.overlays:
-                if overlay.circuit in (None, head.id) and (fields := getattr(overlay, name)):
-                    record = self._revised(record, fields, overlay, name)
-            update[name] = record
-        self._check_overlay_ids("engine_states", {s.id for s in states})
-        self._check_overlay_ids("openings", {o.id for o in openings})
-        return head.model_copy(update=update)
-
-    def _check_overlay_ids(self, table: str, known: Iterable[str]) -> None:
-        names = set(known)
-        for overlay in self.parts.overlays:
-            if overlay.circuit not in (None, self.head.id):
-                continue
-            for name, fields in getattr(overlay, table).items():
-                if name not in names:
-                    where = getattr(fields, "origin", overlay.where)
-                    self.fault(where, f"{table}.{name}", f"no {name} in this circuit", names)
+    def _check_references(self, circuit: Circuit, observations: Sequence[Observation]) -> None:
+        steps: list[Step] = [*observations, *(r.record for r in circuit.remedies.values())]
+        read = [self.conditions_file, *self.parts.records()]
+        for check in REFERENCE_CHECKS:
+            check(Named(circuit, steps, read), self.faults)
 
     # -- components and modes ---------------------------------------------------------
 
     def _components(self) -> dict[str, Component]:
         found = {}
         for use in self.head.components:
-            kind = self.parts.kinds.get(use.kind)
-            if kind is None:
-                continue
-            self._check_use(use, kind)
-            modes = tuple(self._mode(use, m) for m in kind.modes if m.id not in use.omit)
-            title = use.title or kind.title
-            found[use.id] = Component(use.id, kind.id, title, kind.role, modes, use.where)
+            if kind := self.parts.kinds.get(use.kind):
+                self._check_use(use, kind)
+                modes = tuple(self._mode(use, m) for m in kind.modes if m.id not in use.omit)
+                title = use.title or kind.title
+                found[use.id] = Component(use.id, use.kind, title, kind.role, modes, use.where)
         modes_known = [m.ref for c in found.values() for m in c.modes]
-        self._check_overlay_ids("rates", modes_known)
-        self._check_overlay_ids("links", modes_known)
-        return found
+        self.overlays.check_names("rates", modes_known, "components")
+        return with_promotions(found, self.parts.kinds, self.parts.links, self.faults)
 
     def _check_use(self, use: ComponentUse, kind: Kind) -> None:
-        self._unique((x.id, x.where) for x in (*kind.modes, *kind.checks, *kind.rectifications))
+        if use.id == UNLISTED.partition(".")[0]:
+            message = "this id stands for causes the circuit does not list"
+            self.faults.note(use.where, f"{use.id}.id", message, ("id",), use.id, "another id")
         modes = {m.id for m in kind.modes}
-        parts = modes | {x.id for x in (*kind.checks, *kind.rectifications)}
-        for name in use.omit:
-            if name not in parts:
-                self.fault(use.where, f"{use.id}.omit.{name}", f"{kind.id} has no {name}", parts)
-        for name in use.rates:
-            if name not in modes:
-                self.fault(use.where, f"{use.id}.rates.{name}", f"{kind.id} has no {name}", modes)
+        parts = modes | {x.id for x in kind.checks} | {x.id for x in kind.rectifications}
+        what, kept = f"mode, check or rectification of {kind.id}", f"kind:{use.kind}"
+        self.faults.expect(use.where, use.id, "omit", use.omit, what, parts, kept)
+        what = f"mode of {kind.id}"
+        self.faults.expect(use.where, use.id, "rates", use.rates, what, modes, kept)
 
-    def _mode(self, use: ComponentUse, record: Any) -> Mode:
+    def _mode(self, use: ComponentUse, record: ModeRecord) -> Mode:
         ref = f"{use.id}.{record.id}"
-        rate = use.rates.get(record.id, record.rate)
-        for overlay, fields in self._changes("rates", ref):
-            kept = {} if {"per_event", "per_million_hours"} & set(fields) else rate.model_dump()
-            rate = self._revised(rate.model_copy(update={}), _replace(kept, fields), overlay, ref)
-        if rate.event is not None and rate.event not in self.head.exposure.events:
-            known = self.head.exposure.events
-            self.fault(rate.where, rate.event, "the circuit's exposure has no such event", known)
+        rate = self.overlays.rate(use.rates.get(record.id, record.rate), ref)
+        events = self.head.exposure.events
+        if rate.event is not None and rate.event not in events:
+            what, path = "event in the circuit's exposure", f"{ref}.rate.event"
+            self.faults.dangling(rate.where, path, what, rate.event, events, "exposure", ("event",))
         return Mode(ref, use.id, record.title, record, rate, self._probability(rate, ref))
 
-    def _probability(self, rate: Any, ref: str) -> float:
+    def _probability(self, rate: Rate, ref: str) -> float:
         chance = mode_probability(rate, self.head.exposure)
-        if chance >= 0.5:
-            self.fault(rate.where, ref, f"prior {chance:.3g} is too high to be a rate of failure")
-            return 0.5
-        return chance
+        if chance < 0.5:
+            return chance
+        message = "this rate and the exposure make a fault likelier than not"
+        self.faults.note(rate.where, ref, message, (), round(chance, 3), "a prior below 0.5")
+        return 0.5
 
     # -- conditions -------------------------------------------------------------------
 
-    def _conditions(self, components: Mapping[str, Component]) -> dict[str, Condition]:
+    def _conditions(self) -> dict[str, Condition]:
         found: dict[str, Condition] = {}
-        own = self.conditions_file
-        self._unique((c.id, c.where) for c in (*own.use, *own.conditions))
-        for use in own.use:
+        for use in self.conditions_file.use:
             base = self.shared.get(use.id)
             if base is None:
-                self.fault(use.where, f"use.{use.id}", f"no shared condition {use.id}", self.shared)
+                path, known = f"use.{use.id}", self.shared
+                self.faults.dangling(
+                    use.where, path, "shared condition", use.id, known, "conditions", ("id",)
+                )
                 continue
             update = {"points": use.points or base.points, "at": use.at}
             found[use.id] = base.model_copy(update=update)
-        found |= {c.id: c for c in own.conditions}
-        for condition in found.values():
-            self._check_condition(condition, components)
+            self._check_condition(found[use.id], use.where)
+        for condition in self.conditions_file.conditions:
+            found[condition.id] = condition
+            self._check_condition(condition, condition.where)
         return found
 
-    def _check_condition(self, condition: Condition, components: Mapping[str, Component]) -> None:
-        for point in condition.points:
-            if point not in self.head.points:
-                path = f"{condition.id}.points.{point}"
-                self.fault(condition.where, path, "unknown operating point", self.head.points)
-        for name in condition.at:
-            if name not in components:
-                path = f"{condition.id}.at.{name}"
-                self.fault(condition.where, path, f"no component {name}", components)
+    def _check_condition(self, condition: Condition, where: Origin) -> None:
+        name, points, at = condition.id, condition.points, condition.at
+        known = self.head.points
+        self.faults.expect(where, name, "points", points, "operating point", known, "points")
+        self.faults.expect(where, name, "at", at, "component", self.declared, "components")
 
     # -- observations -----------------------------------------------------------------
 
     def _observations(
         self, components: Mapping[str, Component], records: dict[str, Condition]
     ) -> list[Observation]:
-        found = [o for f in self.parts.observations for o in (*f.indications, *f.checks)]
-        taken = {o.id for o in found}
-        omitted = {name for f in self.parts.observations for name in f.omit}
-        shared = self.parts.shared_checks
-        for check in (*shared.indications, *shared.checks) if shared else ():
-            subject = (check.reads or "").split("@")[0]
-            if subject in records and check.id not in taken | omitted:
-                found.append(check)
+        found: list[Observation] = []
+        for file in self.parts.observations:
+            found += [*file.indications, *file.checks]
+        found += self._shared_observations({o.id for o in found}, records)
         for use in self.head.components:
-            found += self._kind_checks(use, components, records)
-        self._unique((o.id, o.where) for o in found)
+            if use.id in components:
+                found += self._kind_checks(use, self.parts.kinds[use.kind], records)
+        self.faults.unique(found)
         for table, cls in (("checks", Check), ("indications", Indication)):
-            self._check_overlay_ids(table, {o.id for o in found if isinstance(o, cls)})
-        return [self._changed(o, f"{o.kind}s", o.id) for o in found]
+            self.overlays.check_names(table, {o.id for o in found if isinstance(o, cls)}, table)
+        return [self.overlays.changed(o, f"{o.kind}s", o.id) for o in found]
+
+    def _shared_observations(
+        self, taken: set[str], records: Mapping[str, Condition]
+    ) -> Iterator[Observation]:
+        """Shared observations of conditions that the circuit has, unless it has its own."""
+        file = self.parts.shared_checks
+        shared: list[Observation] = [*file.indications, *file.checks] if file else []
+        self.faults.unique(shared)
+        known = {o.id for o in shared}
+        omitted: set[str] = set()
+        for own in self.parts.observations:
+            omitted |= set(own.omit)
+            where, what = own.where, "shared check"
+            self.faults.expect(where, "checks", "omit", own.omit, what, known, "checks")
+        for observation in shared:
+            subject = (observation.reads or "").split("@")[0]
+            if subject in records and observation.id not in taken | omitted:
+                yield observation
 
     def _kind_checks(
-        self,
-        use: ComponentUse,
-        components: Mapping[str, Component],
-        records: dict[str, Condition],
-    ) -> list[Observation]:
-        kind = self.parts.kinds.get(use.kind)
-        if kind is None or use.id not in components:
-            return []
-        found: list[Observation] = []
+        self, use: ComponentUse, kind: Kind, records: dict[str, Condition]
+    ) -> Iterator[Observation]:
         for check in kind.checks:
             subject = (check.reads or "").split("@")[0]
-            missing = check.reads is not None and subject not in records
-            if check.id in use.omit or (missing and subject in self.shared):
+            passed_over = subject in self.shared and subject not in records
+            if check.id in use.omit or passed_over:
                 continue
             name = f"{use.id}_{check.id}"
-            update: dict[str, Any] = {"id": name, "title": _titled(check, use, kind)}
+            update: dict[str, Any] = {"id": name, "title": _titled(check, use)}
             if check.sees:
-                records[name] = self._inspection(name, check, use)
-                update |= {"reads": name}
-            found.append(check.model_copy(update=update))
-        return found
-
-    def _inspection(self, name: str, check: Check, use: ComponentUse) -> Condition:
-        """The condition that an inspection of own modes looks at: found or clear."""
-        return Condition(
-            where=check.where, id=name, title=check.title, basis=check.basis, at=(use.id,),
-            states=("clear", "found"), normal="clear", leak={}, unlisted={},
-        )  # fmt: skip
+                if name in records:
+                    path, message = f"{kind.id}.{check.id}", "a condition has the id of this check"
+                    self.faults.note(check.where, path, message, ("id",), name, "a new id")
+                records[name] = _inspection(name, check, use)
+                update |= {"reads": name, "sees": {}}
+            yield check.model_copy(update=update)
 
     # -- nodes ------------------------------------------------------------------------
 
     def _nodes(
         self, components: Mapping[str, Component], records: Mapping[str, Condition]
     ) -> dict[str, Node]:
-        effects: dict[str, dict[str, Effect]] = {}
-        for record in records.values():
-            for name in _node_ids(record):
-                effects[name] = {}
-                unlisted = Effect.model_construct(
-                    where=record.where, basis=record.basis, note="", gives=record.unlisted
-                )
-                if record.unlisted:
-                    effects[name][UNLISTED] = unlisted
+        table = EffectTable(records, self.shared, self.head.points, self.faults)
+        modes = {m.ref: m for c in components.values() for m in c.modes}
         for component in components.values():
-            self._own_effects(component, records, effects)
-        for tables in (self.parts.links, self.parts.overlays):
-            for table in tables:
-                self._link_effects(table, components, records, effects)
-        return {
-            name: Node(name, record, name.partition("@")[2] or None, effects[name])
-            for record in records.values()
-            for name in _node_ids(record)
-        }
-
-    def _own_effects(
-        self,
-        component: Component,
-        records: Mapping[str, Condition],
-        effects: dict[str, dict[str, Effect]],
-    ) -> None:
-        for mode in component.modes:
-            for place, effect in mode.record.shows.items():
-                if place.split("@")[0] in records:
-                    self._add(mode.ref, place, effect, records, effects)
-                elif place.split("@")[0] not in self.shared:
-                    self.fault(effect.where, place, "no such shared condition", self.shared)
-        kind = self.parts.kinds[component.kind]
-        known = {m.id: m for m in kind.modes}
-        for check in kind.checks:
-            for mode_id, chance in check.sees.items():
-                ref = f"{component.id}.{mode_id}"
-                if mode_id not in known:
-                    self.fault(check.where, f"sees.{mode_id}", "no such mode", known)
-                elif f"{component.id}_{check.id}" in records and any(
-                    m.ref == ref for m in component.modes
-                ):
-                    gives = {"found": chance}
-                    effect = Effect(where=check.where, basis=check.basis, gives=gives)
-                    effects[f"{component.id}_{check.id}"][ref] = effect
-
-    def _link_effects(
-        self,
-        table: LinksFile | Overlay,
-        components: Mapping[str, Component],
-        records: Mapping[str, Condition],
-        effects: dict[str, dict[str, Effect]],
-    ) -> None:
-        modes = {m.ref for c in components.values() for m in c.modes}
-        for ref, places in table.links.items():
-            for place, effect in places.items():
-                if ref not in modes:
-                    self.fault(effect.where, ref, "no such mode in this circuit", modes)
-                    break
-                self._add(ref, place, effect, records, effects)
-
-    def _add(
-        self,
-        ref: str,
-        place: str,
-        effect: Effect,
-        records: Mapping[str, Condition],
-        effects: dict[str, dict[str, Effect]],
-    ) -> None:
-        name, _, point = place.partition("@")
-        record = records.get(name)
-        if record is None:
-            self.fault(effect.where, f"{ref}.{place}", f"no condition {name}", records)
-            return
-        for state in effect.gives:
-            if state not in record.states or state == record.normal:
-                known = [s for s in record.states if s != record.normal]
-                self.fault(effect.where, f"{ref}.{place}.{state}", "no abnormal state", known)
-                return
-        targets = [place] if point else _node_ids(record)
-        for target in targets:
-            if target in effects:
-                effects[target][ref] = effect
-            elif name not in self.shared or point not in self.head.points:
-                known = _node_ids(record)
-                self.fault(effect.where, f"{ref}.{place}", f"{name} has no such point", known)
+            table.lay_kind(component, self.parts.kinds[component.kind])
+        files: list[LinksFile | Overlay] = [*self.parts.links, *self.overlays.given]
+        for file in files:
+            table.lay_links(file, modes)
+        return table.nodes()
 
     # -- observables and remedies -----------------------------------------------------
 
     def _observables(
-        self,
-        observations: Sequence[Observation],
-        nodes: Mapping[str, Node],
-        components: Mapping[str, Component],
+        self, observations: Sequence[Observation], nodes: Mapping[str, Node]
     ) -> dict[str, Observable]:
         found: dict[str, Observable] = {}
         for record in observations:
-            for name in record.through:
-                if name not in components:
-                    path = f"{record.id}.through.{name}"
-                    self.fault(record.where, path, f"no component {name}", components)
+            where, through, known = record.where, record.through, self.declared
+            self.faults.expect(
+                where, record.id, "through", through, "component", known, "components"
+            )
             for point in record.points or (None,):
                 if made := self._observable(record, point, nodes):
                     found[made.id] = made
+                else:
+                    # Its own problem is told; a rectification proved by it has no other.
+                    self.faults.unsure.add(f"{record.kind}s")
         return found
 
     def _observable(
@@ -413,9 +290,10 @@ class Assembly:
         reads = record.reads or record.id
         target = reads if "@" in reads or point is None else f"{reads}@{point}"
         node = nodes.get(target) or nodes.get(reads)
-        path = f"{record.id}.reads.{target}"
         if node is None:
-            self.fault(record.where, path, "no such condition at this point", nodes)
+            path, what = f"{record.id}.reads", "condition at this point"
+            at = ("reads",)
+            self.faults.dangling(record.where, path, what, target, nodes, "conditions use", at)
             return None
         outcomes = self._outcomes(record, node)
         if outcomes is None or not self._scale_fits(record, point, node):
@@ -431,124 +309,81 @@ class Assembly:
         return Observable(name, record, point, node.id, tuple(words), normal, reports, through)
 
     def _outcomes(self, record: Observation, node: Node) -> dict[str, tuple[str, ...]] | None:
-        outcomes = record.outcomes or {s: (s,) for s in node.record.states}
-        reported = [s for states in outcomes.values() for s in states]
+        states = node.record.states
+        outcomes = record.outcomes or {s: (s,) for s in states}
+        reported = [s for reports in outcomes.values() for s in reports]
         path = f"{record.id}.outcomes"
-        if sorted(reported) != sorted(node.record.states):
+        if sorted(reported) != sorted(states):
             message = "every state of the condition belongs to exactly one outcome"
-            self.fault(record.where, path, message, node.record.states)
+            value, accepted = ", ".join(reported), ", ".join(states)
+            self.faults.note(record.where, path, message, ("outcomes",), value, accepted)
             return None
-        for word in record.words:
-            if word not in outcomes:
-                self.fault(record.where, f"{record.id}.words.{word}", "no such outcome", outcomes)
+        self.faults.expect(record.where, record.id, "words", record.words, "outcome", outcomes)
         return outcomes
 
     def _scale_fits(self, record: Observation, point: str | None, node: Node) -> bool:
         if record.scale is None:
             return True
-        cuts = record.scale.limits.get(point or "any", record.scale.limits.get("any"))
+        limits, key = record.scale.limits, point or "any"
+        cuts = limits.get(key, limits.get("any"))
         need = len(node.record.states) - 1
-        if cuts is None or len(cuts) != need:
-            path = f"{record.id}.scale.limits.{point or 'any'}"
-            self.fault(record.scale.where, path, f"needs {need} limits between the states")
-            return False
-        return True
+        if cuts is not None and len(cuts) == need:
+            return True
+        path, at = f"{record.id}.scale.limits.{key}", ("limits", key if key in limits else "any")
+        value = list(cuts) if cuts is not None else ""
+        message, accepted = "not the limits between the states", f"{need} numbers, rising"
+        self.faults.note(record.scale.where, path, message, at, value, accepted)
+        return False
 
     def _remedies(
         self, components: Mapping[str, Component], observables: Mapping[str, Observable]
     ) -> dict[str, Remedy]:
         found: dict[str, Remedy] = {}
         for use in self.head.components:
-            kind = self.parts.kinds.get(use.kind)
-            for record in kind.rectifications if kind else ():
-                if record.id in use.omit or use.id not in components:
+            if use.id not in components:
+                continue
+            for record in self.parts.kinds[use.kind].rectifications:
+                if record.id in use.omit:
                     continue
-                if made := self._remedy(record, use, kind, components, observables):
+                if made := self._remedy(record, use, components[use.id], observables):
                     found[made.id] = made
-        self._check_overlay_ids("rectifications", found)
+        self.overlays.check_names("rectifications", found, "rectifications")
         return found
 
     def _remedy(
         self,
         record: Rectification,
         use: ComponentUse,
-        kind: Kind | None,
-        components: Mapping[str, Component],
+        component: Component,
         observables: Mapping[str, Observable],
     ) -> Remedy | None:
-        assert kind is not None
-        known = {m.id for m in kind.modes}
-        for mode in record.restores:
-            if mode not in known:
-                self.fault(record.where, f"{record.id}.restores.{mode}", "no such mode", known)
-        present = {m.ref for m in components[use.id].modes}
-        restores = tuple(r for m in record.restores if (r := f"{use.id}.{m}") in present)
+        name = f"{use.id}_{record.id}"
+        update = {"id": name, "title": _titled(record, use)}
+        own = self.overlays.changed(record.model_copy(update=update), "rectifications", name)
+        known = [m.id for m in self.parts.kinds[use.kind].modes]
+        where, what, kept = own.where, f"mode of {use.kind}", f"kind:{use.kind}"
+        self.faults.expect(where, record.id, "restores", own.restores, what, known, kept)
+        present = {m.ref for m in component.modes}
+        restores = tuple(r for m in own.restores if (r := f"{use.id}.{m}") in present)
         if not restores:
             return None
-        if record.verify not in observables:
-            path = f"{record.id}.verify.{record.verify}"
-            self.fault(record.where, path, "no such observation in this circuit", observables)
-        name = f"{use.id}_{record.id}"
-        update = {"id": name, "title": _titled(record, use, kind)}
-        own = self._changed(record.model_copy(update=update), "rectifications", name)
+        if own.verify not in observables:
+            path, what, at = f"{record.id}.verify", "observation in this circuit", ("verify",)
+            tables = "checks indications conditions use"
+            self.faults.dangling(own.where, path, what, own.verify, observables, tables, at)
         return Remedy(name, own, use.id, restores)
 
-    # -- cautions and sources ---------------------------------------------------------
 
-    def _caution_texts(self) -> dict[str, str]:
-        file = self.parts.cautions
-        return {c.id: c.text for c in file.cautions} if file else {}
-
-    def _check_cautions(self, steps: Iterable[Step]) -> None:
-        known = self._caution_texts()
-        openings = {o.id for o in self.head.openings}
-        for step in steps:
-            for code in step.cautions:
-                if code not in known:
-                    self.fault(step.where, f"{step.id}.cautions.{code}", "no such caution", known)
-            for name in step.needs.opens:
-                if name not in openings:
-                    path = f"{step.id}.needs.opens.{name}"
-                    self.fault(step.where, path, "no such opening", openings)
-
-    def _check_sources(
-        self, components: Mapping[str, Component], nodes: Mapping[str, Node]
-    ) -> None:
-        known = self.parts.sources.sources if self.parts.sources else {}
-        based: list[Based] = [m.rate for c in components.values() for m in c.modes]
-        based += [effect for node in nodes.values() for effect in node.effects.values()]
-        for record in based:
-            if not record.basis.startswith("published:"):
-                continue
-            for name in record.basis.removeprefix("published:").split(","):
-                if name.strip() not in known:
-                    self.fault(record.where, f"basis.{name.strip()}", "no such source", known)
+def _inspection(name: str, check: Check, use: ComponentUse) -> Condition:
+    """The condition that an inspection of own modes looks at: found or clear."""
+    return Condition(
+        where=check.where, id=name, title=check.title, basis=check.basis, at=(use.id,),
+        states=("clear", "found"), normal="clear", leak={}, unlisted={},
+    )  # fmt: skip
 
 
-def _node_ids(record: Condition) -> list[str]:
-    return [f"{record.id}@{point}" for point in record.points] or [record.id]
-
-
-def _titled(step: Step, use: ComponentUse, kind: Kind) -> str:
+def _titled(step: Step, use: ComponentUse) -> str:
     """The kind's words, with the instance's own title where it has one."""
     if not use.title:
         return step.title
     return f"{use.title}: {step.title[0].lower()}{step.title[1:]}"
-
-
-def _merged(old: Mapping[str, Any], new: Mapping[str, Any]) -> dict[str, Any]:
-    """`new` laid over `old`, mappings merged key by key."""
-    both = dict(old)
-    for key, value in new.items():
-        inner = both.get(key)
-        if isinstance(inner, Mapping) and isinstance(value, Mapping):
-            both[key] = _merged(inner, value)
-        else:
-            both[key] = value
-    return both
-
-
-def _replace(old: Mapping[str, Any], new: Mapping[str, Any]) -> dict[str, Any]:
-    """A rate given anew drops the fields of the old kind of rate."""
-    cleared = {"per_million_hours": None, "per_event": None, "event": None}
-    return {**(old or cleared), **new}

@@ -9,7 +9,8 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Iterable, Sequence
+import re
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from importlib.resources import files
 from importlib.resources.abc import Traversable
 from pathlib import Path
@@ -18,9 +19,19 @@ from typing import TypeVar
 from pydantic import BaseModel
 
 from diag.circuit.assembly import Assembly, Parts
+from diag.circuit.faults import Faults, nearest
+from diag.circuit.graph import structure_problems
 from diag.circuit.model import Circuit
-from diag.circuit.reading import Document, read_document, validated
+from diag.circuit.reading import (
+    MAX_BYTES,
+    Document,
+    brief,
+    printable,
+    read_document,
+    validated,
+)
 from diag.circuit.records import (
+    WORD,
     CautionsFile,
     CircuitFile,
     ConditionsFile,
@@ -31,7 +42,7 @@ from diag.circuit.records import (
     SharedConditionsFile,
     SourcesFile,
 )
-from diag.errors import InputError, Problem, UnknownName
+from diag.errors import InputError, Origin, Problem, UnknownName
 
 M = TypeVar("M", bound=BaseModel)
 
@@ -45,9 +56,16 @@ def knowledge_root() -> Traversable:
 
 
 def circuit_names(root: Traversable | None = None) -> list[str]:
-    """Ids of the circuits under the knowledge root."""
+    """Ids of the circuits under the knowledge root.
+
+    Raises:
+        InputError: the folder of circuits cannot be listed.
+    """
     folder = (root or knowledge_root()) / "circuits"
-    return sorted(entry.name for entry in folder.iterdir() if entry.is_dir())
+    try:
+        return sorted(entry.name for entry in folder.iterdir() if entry.is_dir())
+    except OSError as error:
+        raise InputError(f"{_shown(folder)} cannot be listed: {_reason(error)}") from error
 
 
 def load_circuit(
@@ -60,39 +78,60 @@ def load_circuit(
         InputError: the folder or an overlay has faults; all of them are listed.
     """
     shared = root or knowledge_root()
-    reader = _Reader(shared)
-    circuit = reader.circuit(_circuit_folder(name, shared), [Path(o) for o in overlays])
-    faults = [problem for problem in reader.problems if not problem.doubt]
+    names = circuit_names(shared)
+    reader = _Reader(shared, names)
+    circuit = reader.circuit(_circuit_folder(name, shared, names), [Path(o) for o in overlays])
+    faults = _distinct(problem for problem in reader.problems() if not problem.doubt)
     if circuit is None or faults:
         count = f"{len(faults)} problem{'s' if len(faults) != 1 else ''}"
-        raise InputError(f"circuit {name} cannot be used: {count}", sorted(faults, key=_order))
+        raise InputError(f"circuit {brief(name)} cannot be used: {count}", faults)
     return circuit
 
 
-def _order(problem: Problem) -> tuple[str, int, int]:
-    return (problem.where.file, problem.where.line, problem.where.column)
+def _distinct(problems: Iterable[Problem]) -> list[Problem]:
+    """In the order of the files; what several instances of a kind share is told once."""
+    told = {(p.where, p.message, p.value): p for p in reversed(list(problems))}
+    return sorted(told.values(), key=lambda p: (p.where, p.path))
 
 
-def _circuit_folder(name: str, root: Traversable) -> Traversable:
-    known = circuit_names(root)
+def _circuit_folder(name: str, root: Traversable, names: Sequence[str]) -> Traversable:
     plain = name.replace("-", "_")
-    if plain in known:
+    if plain in names:
         return root / "circuits" / plain
-    if Path(name).is_dir():
-        return Path(name)
-    raise UnknownName("circuit", name, known)
+    try:
+        if Path(name).is_dir():
+            return Path(name)
+    except (OSError, ValueError):
+        # Longer than a path may be, or not a path at all: then it is no folder either.
+        pass
+    raise UnknownName("circuit", name, names)
 
 
 class _Reader:
     """Reads the files of one circuit and gathers their problems."""
 
-    def __init__(self, root: Traversable) -> None:
+    def __init__(self, root: Traversable, names: Sequence[str]) -> None:
         self.root = root
-        self.problems: list[Problem] = []
+        self.names = names
+        self.documents: dict[str, Document] = {}
+        self.faults = Faults(unsure=set(), locate=self._locate)
         self.digest = hashlib.sha256()
 
+    def problems(self) -> Iterator[Problem]:
+        """Everything wrong with what was read so far."""
+        for document in self.documents.values():
+            yield from document.problems
+        yield from self.faults.problems
+
+    def _locate(self, where: Origin, path: tuple[str | int, ...]) -> Origin:
+        document = self.documents.get(where.file)
+        return document.inside(where, path) if document else where
+
     def circuit(self, folder: Traversable, overlays: Iterable[Path]) -> Circuit | None:
-        head = self.read(CircuitFile, folder / "circuit.yaml")
+        """The circuit in `folder`, or None where it cannot be put together at all."""
+        shared = self.root / "shared"
+        document = self.document(folder / "circuit.yaml")
+        head = self.record(CircuitFile, document)
         conditions = self.read(ConditionsFile, folder / "conditions.yaml")
         parts = Parts(
             links=self.read_all(LinksFile, folder, "links"),
@@ -100,67 +139,131 @@ class _Reader:
                 *self.read_all(ObservationsFile, folder, "indications"),
                 *self.read_all(ObservationsFile, folder, "checks"),
             ],
-            shared_conditions=self.read(
-                SharedConditionsFile, self.root / "shared" / "conditions.yaml"
-            ),
-            shared_checks=self.read(ObservationsFile, self.root / "shared" / "checks.yaml"),
-            cautions=self.read(CautionsFile, self.root / "shared" / "cautions.yaml"),
-            sources=self.read(SourcesFile, self.root / "shared" / "sources.yaml"),
-            overlays=[o for path in overlays if (o := self.read(Overlay, path))],
+            shared_conditions=self.read(SharedConditionsFile, shared / "conditions.yaml"),
+            shared_checks=self.read(ObservationsFile, shared / "checks.yaml"),
+            cautions=self.read(CautionsFile, shared / "cautions.yaml"),
+            sources=self.read(SourcesFile, shared / "sources.yaml"),
+            overlays=[o for path in overlays if (o := self.overlay(path, head))],
+            kinds=self.kinds(document, folder),
         )
         if head is None or conditions is None:
             return None
-        parts.kinds = self.kinds(head, folder)
-        assembly = Assembly(head, conditions, parts, self.digest.hexdigest())
-        circuit = assembly.circuit()
-        self.problems += assembly.problems
+        if head.id != folder.name and folder.name in self.names:
+            document.fault(("id",), "not the name of its folder", head.id, folder.name)
+        content_hash = self.digest.hexdigest()
+        circuit = Assembly(head, conditions, parts, content_hash, self.faults).circuit()
+        if "components" not in self.faults.unsure:
+            whole = "lines" not in self.faults.unsure
+            self.faults.problems.extend(structure_problems(circuit, whole))
         return circuit
+
+    def overlay(self, path: Path, head: CircuitFile | None) -> Overlay | None:
+        """An overlay; one for another circuit is fine, one for no circuit is not."""
+        document = self.document(path)
+        # Its tables only change what the circuit has, so a hole in them makes nothing unsure.
+        overlay = validated(Overlay, document)
+        known = {*self.names, *([head.id] if head else [])}
+        if overlay and overlay.circuit and overlay.circuit not in known:
+            accepted = nearest(overlay.circuit, known)
+            document.fault(("circuit",), "no such circuit", overlay.circuit, accepted)
+        return overlay
 
     def read_all(self, model: type[M], folder: Traversable, stem: str) -> list[M]:
         """All files of the folder named `STEM*.yaml`."""
-        if not folder.is_dir():
-            return []
-        found = sorted(
-            (e for e in folder.iterdir() if e.name.startswith(stem) and e.name.endswith(".yaml")),
-            key=lambda e: e.name,
-        )
-        return [record for entry in found if (record := self.read(model, entry))]
+        found = [e for e in self._listed(folder) if e.startswith(stem) and e.endswith(".yaml")]
+        return [record for name in found if (record := self.read(model, folder / name))]
 
-    def kinds(self, head: CircuitFile, folder: Traversable) -> dict[str, Kind]:
-        """The kinds that the circuit uses: its own `kinds/` first, then the shared ones."""
+    def _listed(self, folder: Traversable) -> list[str]:
+        try:
+            return sorted(entry.name for entry in folder.iterdir())
+        except OSError as error:
+            document = self.documents.setdefault(str(folder), Document(_shown(folder)))
+            document.fault((), f"cannot be listed: {_reason(error)}", accepted="a folder")
+            return []
+
+    def kinds(self, head: Document, folder: Traversable) -> dict[str, Kind]:
+        """The kinds that the circuit uses: its own `kinds/` first, then the shared ones.
+
+        They are looked up in the file as written, so that the problems of kinds are found
+        even when the circuit itself has some.
+        """
         found: dict[str, Kind] = {}
-        for use in head.components:
-            if use.kind in found:
-                continue
-            own = folder / "kinds" / f"{use.kind}.yaml"
-            path = own if own.is_file() else self.root / "kinds" / f"{use.kind}.yaml"
-            if not path.is_file():
-                known = [e.name[:-5] for e in (self.root / "kinds").iterdir()]
-                problem = str(UnknownName("kind", use.kind, known))
-                self.problems.append(Problem(use.where, f"components.{use.id}.kind", problem))
-            elif kind := self.read(Kind, path):
-                found[use.kind] = kind
+        for path, name in _kinds_used(head):
+            own = folder / "kinds" / f"{name}.yaml"
+            file = own if _present(own) else self.root / "kinds" / f"{name}.yaml"
+            if not _present(file):
+                known = [entry.removesuffix(".yaml") for entry in self._listed(self.root / "kinds")]
+                head.fault(path, "no such kind", name, nearest(name, known))
+                self._doubt_kind(name)
+            elif kind := self._kind(file, name):
+                found[name] = kind
         return found
 
+    def _kind(self, file: Traversable, name: str) -> Kind | None:
+        document = self.document(file)
+        kind = validated(Kind, document)
+        if document.unsure:
+            self._doubt_kind(name)
+        if kind and kind.id != name:
+            document.fault(("id",), "not the name of its file", kind.id, name)
+        return kind
+
+    def _doubt_kind(self, name: str) -> None:
+        self.faults.unsure |= {f"kind:{name}", "checks", "rectifications"}
+
     def read(self, model: type[M], path: Traversable) -> M | None:
-        try:
-            raw = path.read_bytes()
-        except OSError as error:
-            reason = error.strerror or str(error)
-            document = Document(str(path))
-            document.fault((), f"cannot be read: {reason}", accepted=f"a {model.__name__} in YAML")
-            self.problems += document.problems
-            return None
-        document = read_document(raw, _shown(path))
+        """The record in the file, or None where nothing of it can be used."""
+        return self.record(model, self.document(path))
+
+    def record(self, model: type[M], document: Document) -> M | None:
+        """The document as a record; tables that may lack entries are remembered."""
         record = validated(model, document)
-        self.problems += document.problems
+        self.faults.unsure |= document.unsure
+        return record
+
+    def document(self, path: Traversable) -> Document:
+        """The file as data, counted into the content hash."""
+        shown = _shown(path)
+        try:
+            with path.open("rb") as stream:
+                # One byte more than is accepted, so that no file is read to its end in vain.
+                document = read_document(stream.read(MAX_BYTES + 1), shown)
+        except (OSError, ValueError) as error:
+            document = Document(shown)
+            document.fault((), f"cannot be read: {_reason(error)}", accepted="a YAML file")
         canonical = json.dumps(document.data, sort_keys=True, default=str)
         self.digest.update(f"{path.name}\n{canonical}\n".encode())
-        return record
+        self.documents[shown] = document
+        return document
+
+
+def _kinds_used(head: Document) -> Iterator[tuple[tuple[str | int, ...], str]]:
+    """Kinds by name, each once, with the place where it is first used."""
+    uses = head.data.get("components") if isinstance(head.data, Mapping) else None
+    told = set()
+    for i, use in enumerate(uses if isinstance(uses, list) else ()):
+        name = use.get("kind") if isinstance(use, Mapping) else None
+        if isinstance(name, str) and re.fullmatch(WORD, name) and name not in told:
+            told.add(name)
+            yield ("components", i, "kind"), name
+
+
+def _present(path: Traversable) -> bool:
+    try:
+        return path.is_file()
+    except OSError:
+        # Something is there; reading it will say what is wrong.
+        return True
+
+
+def _reason(error: Exception) -> str:
+    return getattr(error, "strerror", None) or str(error)
 
 
 def _shown(path: Traversable) -> str:
     """A path as short as it stays useful: relative to here where that is shorter."""
-    text = str(path)
-    here = str(Path.cwd())
-    return text[len(here) + 1 :] if text.startswith(here + "/") else text
+    text = printable(str(path))
+    try:
+        return str(Path(text).relative_to(Path.cwd()))
+    except (OSError, ValueError):
+        return text

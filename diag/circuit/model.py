@@ -176,4 +176,7 @@ def mode_probability(rate: Rate, exposure: Exposure) -> float:
         return -math.expm1(-rate.per_million_hours * 1e-6 * exposure.hours)
     assert rate.per_event is not None
     assert rate.event is not None
-    return -math.expm1(math.log1p(-rate.per_event) * exposure.events.get(rate.event, 0.0))
+    events = exposure.events.get(rate.event, 0.0)
+    if rate.per_event == 1.0:
+        return float(events > 0.0)
+    return -math.expm1(math.log1p(-rate.per_event) * events)

@@ -20,20 +20,28 @@ from pydantic import (
 
 from diag.errors import Origin
 
-Id = Annotated[str, StringConstraints(pattern=r"^[a-z][a-z0-9_]*$", max_length=60)]
+WORD = r"^[a-z][a-z0-9_]*$"
+PLACE = r"^[a-z][a-z0-9_]*(@[a-z][a-z0-9_]*)?$"
+MODE = r"^[a-z][a-z0-9_]*\.[a-z][a-z0-9_]*$"
+BASIS = r"^(computed|common practice|judgement|from memory|published: [A-Za-z0-9_, ]+)$"
+PATTERNS = {
+    WORD: "a lower-case word with underscores",
+    PLACE: "NAME or NAME@POINT in lower case",
+    MODE: "COMPONENT.MODE in lower case",
+    BASIS: "computed, common practice, judgement, from memory, or published: SOURCE, …",
+}
+"""What each pattern asks for, in words."""
+
+Id = Annotated[str, StringConstraints(pattern=WORD, max_length=60)]
 Text = Annotated[str, StringConstraints(min_length=1, max_length=2000)]
-Place = Annotated[str, StringConstraints(pattern=r"^[a-z][a-z0-9_]*(@[a-z][a-z0-9_]*)?$")]
+Place = Annotated[str, StringConstraints(pattern=PLACE)]
 """A condition or observation, with its operating point where it has one: `NAME@POINT`."""
-ModeRef = Annotated[str, StringConstraints(pattern=r"^[a-z][a-z0-9_]*\.[a-z][a-z0-9_]*$")]
+ModeRef = Annotated[str, StringConstraints(pattern=MODE)]
 """A failure mode of a component: `COMPONENT.MODE`."""
 Probability = Annotated[float, Field(ge=0.0, le=1.0)]
 Minutes = Annotated[float, Field(ge=0.0, le=100_000.0)]
-Basis = Annotated[
-    str,
-    StringConstraints(
-        pattern=r"^(computed|common practice|judgement|from memory|published: [A-Za-z0-9_, ]+)$"
-    ),
-]
+Factor = Annotated[float, Field(gt=0, le=1e4)]
+Basis = Annotated[str, StringConstraints(pattern=BASIS)]
 """Where a number comes from; `published:` names ids of `knowledge/shared/sources.yaml`."""
 
 Medium = Literal[
@@ -41,6 +49,13 @@ Medium = Literal[
 ]
 Engine = Literal["any", "stopped", "cold", "hot_stopped", "motoring", "idle", "high_power"]
 """State of the engine a step needs. `any` is desk work; `stopped` is cold or hot."""
+Unit = Literal[
+    "psi", "bar", "mbar", "kPa", "MPa", "degC", "degF", "litre", "quart", "pint", "gallon",
+    "L/min", "L/h", "quart/hour", "lb/h", "percent", "ppm", "cSt", "mg/g", "mm", "inch", "rpm",
+    "ohm", "kohm", "Mohm", "volt", "mA", "second", "minute", "hour",
+]  # fmt: skip
+"""Units an instrument of the oil circuit may be marked in, as pint writes them. A fixed list,
+since asking pint itself would cost every start a good part of a second."""
 
 
 class Placed(dict[str, Any]):
@@ -66,9 +81,9 @@ class Record(BaseModel):
         if "where" in data:
             raise ValueError("unknown key 'where'")
         own = cls._own(dict(data))
-        inherited = info.context.get("basis") if info.context else None
-        if inherited is not None and "basis" in cls.model_fields:
-            own.setdefault("basis", inherited)
+        context = info.context or {}
+        if "basis" in context and "basis" in cls.model_fields and data is not context.get("file"):
+            own.setdefault("basis", context["basis"])
         own["where"] = data.origin
         return own
 
@@ -153,8 +168,9 @@ class ModeRecord(Record):
     """Effects on shared conditions; without a point, at every point the circuit has."""
     signal: Signal | None = None
     """For instruments: what the mode does to the indications that pass through it."""
-    promotes: dict[ModeRef, Annotated[float, Field(gt=0, le=1e4)]] = Field(default_factory=dict)
-    """Factors on the prior odds of other modes while this one is present."""
+    promotes: dict[ModeRef, Factor] = Field(default_factory=dict)
+    """Factors on the prior odds of other modes while this one is present. Modes of components
+    that a circuit lacks are passed over: kinds are shared."""
 
 
 class Needs(Record):
@@ -184,7 +200,7 @@ class Step(Based):
 class Scale(Based):
     """How a number on an instrument divides into the states of its condition."""
 
-    unit: Text
+    unit: Unit
     range: tuple[float, float]
     """Ends of the instrument's range, in `unit`."""
     tolerance: Annotated[float, Field(gt=0)]
@@ -275,7 +291,8 @@ class Kind(Record):
     description: str = ""
     role: Literal[
         "tank", "pump", "filter", "valve", "line", "gallery", "jet", "bearing", "gear",
-        "chamber", "cooler", "vent", "instrument", "oil", "servicing", "consumer", "detector",
+        "chamber", "seal", "cooler", "vent", "instrument", "detector", "oil", "servicing",
+        "consumer",
     ]  # fmt: skip
     modes: Annotated[tuple[ModeRecord, ...], Field(min_length=1)]
     checks: tuple[Check, ...] = ()
@@ -414,10 +431,15 @@ class ConditionsFile(Record):
 
 
 class LinksFile(Record):
-    """`links*.yaml`: effects of modes on conditions; they replace those of the kind."""
+    """`links*.yaml`: what modes do to conditions and to other modes, in this circuit.
+
+    An entry replaces the kind's own for the same mode and target.
+    """
 
     basis: Basis
-    links: dict[ModeRef, dict[Place, Effect]]
+    links: dict[ModeRef, dict[Place, Effect]] = Field(default_factory=dict)
+    promotes: dict[ModeRef, dict[ModeRef, Factor]] = Field(default_factory=dict)
+    """Factors on the prior odds of other modes while the first one is present."""
 
 
 class ObservationsFile(Record):
@@ -457,6 +479,11 @@ class SourcesFile(Record):
     sources: dict[str, Text]
 
 
+Fields = dict[str, Any]
+"""Fields of a record as written, checked once they are laid over it."""
+Changes = dict[Id, Fields]
+
+
 class Overlay(Record):
     """An operator's own values laid over a circuit, by id.
 
@@ -466,13 +493,13 @@ class Overlay(Record):
     overlay: Id
     circuit: Id | None = None
     basis: Basis
-    checks: dict[Id, dict[str, Any]] = Field(default_factory=dict)
-    indications: dict[Id, dict[str, Any]] = Field(default_factory=dict)
-    rectifications: dict[Id, dict[str, Any]] = Field(default_factory=dict)
-    openings: dict[Id, dict[str, Any]] = Field(default_factory=dict)
-    engine_states: dict[Id, dict[str, Any]] = Field(default_factory=dict)
-    rates: dict[ModeRef, dict[str, Any]] = Field(default_factory=dict)
+    checks: Changes = Field(default_factory=dict)
+    indications: Changes = Field(default_factory=dict)
+    rectifications: Changes = Field(default_factory=dict)
+    openings: Changes = Field(default_factory=dict)
+    engine_states: Changes = Field(default_factory=dict)
+    rates: dict[ModeRef, Fields] = Field(default_factory=dict)
     links: dict[ModeRef, dict[Place, Effect]] = Field(default_factory=dict)
-    costs: dict[str, Any] = Field(default_factory=dict)
-    exposure: dict[str, Any] = Field(default_factory=dict)
-    unlisted: dict[str, Any] = Field(default_factory=dict)
+    costs: Fields = Field(default_factory=dict)
+    exposure: Fields = Field(default_factory=dict)
+    unlisted: Fields = Field(default_factory=dict)

@@ -50,7 +50,8 @@ def percent(chance: float) -> str:
         return "<0.1 %"
     if chance > 0.999:
         return ">99.9 %"
-    return f"{100 * chance:.1f} %" if chance < 0.1 else f"{100 * chance:.0f} %"
+    digits = 1 if chance < 0.1 or chance > 0.99 else 0
+    return f"{100 * chance:.{digits}f} %"
 
 
 def event_line(circuit: Circuit | None, event: AnyEvent) -> str:

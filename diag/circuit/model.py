@@ -129,6 +129,9 @@ class Circuit:
     content_hash: str
     """SHA-256 over all that was read, overlays included."""
 
+    def __repr__(self) -> str:
+        return f"<Circuit {self.id} {self.file.version}>"
+
     @property
     def id(self) -> str:
         return self.file.id

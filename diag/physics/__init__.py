@@ -1,0 +1,1 @@
+"""The physics of the circuit: oil, elements, and the steady state of the whole circuit."""

@@ -270,7 +270,7 @@ class Assessment:
         rows = [*self.marginals.items(), (NOTHING, self.posterior.nothing_wrong)]
         rows.sort(key=lambda row: (-row[1], row[0]))
         causes = tuple((ref, round(p, 6)) for ref, p in rows[:TOP])
-        return Standing(causes=causes, coverage=round(self.posterior.coverage.value, 8))
+        return Standing(causes=causes)
 
     @cached_property
     def steps(self) -> list[NextStep]:

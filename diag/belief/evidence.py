@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from diag.circuit.model import Circuit, Observable
+from diag.circuit.reading import brief
 from diag.circuit.records import Scale
 from diag.errors import UsageError
 
@@ -26,8 +27,14 @@ Array = NDArray[np.float64]
 MISREAD = 0.005
 """P(a number read or written down has nothing to do with the instrument). Judgement."""
 
-_NUMBER = re.compile(r"^([-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*([^\d\s].*)?$")
-_FINDING = re.compile(r"^([a-zA-Z][\w-]*)(?:@([a-zA-Z][\w-]*))?=(.+)$")
+LONGEST = 200
+"""Characters in a finding as it is written."""
+_NUMBER = re.compile(
+    r"^([-+]?(?:\d{1,20}\.?\d{0,20}|\.\d{1,20})(?:[eE][-+]?\d{1,3})?)\s*([^\d\s].*)?$", re.ASCII
+)
+_FINDING = re.compile(r"^([a-zA-Z][\w-]*)(?:@([a-zA-Z][\w-]*))?=(.+)$", re.ASCII)
+_UNIT = re.compile(r"^[a-zA-Z°%µ][a-zA-Z_°%µ]*(?: ?/ ?[a-zA-Z]+)?$")
+"""A plain unit, such as psi, degC or L/h; anything more is no unit a gauge is marked in."""
 _UNITS = {
     "c": "degC", "°c": "degC", "celsius": "degC", "f": "degF", "°f": "degF", "l": "litre",
     "ltr": "litre", "liter": "litre", "litres": "litre", "liters": "litre", "qt": "quart",
@@ -63,9 +70,9 @@ def parse_finding(circuit: Circuit, text: str) -> Finding:
         UsageError: not of that form, or the value is not one the observation can take.
         UnknownName: no such observation; names the nearest.
     """
-    match = _FINDING.match(text.strip())
+    match = _FINDING.match(text.strip()) if len(text) <= LONGEST else None
     if not match:
-        raise UsageError(f"{text!r} is not a finding; write NAME@POINT=VALUE or NAME=VALUE")
+        raise UsageError(f"{brief(text)} is not a finding; write NAME@POINT=VALUE or NAME=VALUE")
     name, point, value = match.groups()
     plain = name.replace("-", "_").lower()
     where = point.replace("-", "_").lower() if point else None
@@ -78,6 +85,8 @@ def make_finding(observable: Observable, value: str, trust: float = 1.0) -> Find
     Raises:
         UsageError: the value is not an outcome, or the number does not fit the scale.
     """
+    if len(value) > LONGEST:
+        raise UsageError(f"{observable.id} cannot be {brief(value)}: too long")
     finding = Finding(observable, _tidy(observable, value), trust)
     state_likelihood(finding)
     return finding
@@ -105,7 +114,7 @@ def number_of(finding: Finding) -> float | None:
     if not unit:
         example = f"{match[1]}{scale.unit}"
         raise UsageError(f"{finding}: the number needs its unit, for example {example}")
-    value = in_unit(number, unit, scale.unit, str(finding))
+    value = in_unit(number, unit, scale.unit, finding.key)
     low, high = scale.range
     if not low <= value <= high:
         wanted = f"{low:g} to {high:g} {scale.unit}"
@@ -117,7 +126,7 @@ def _not_taken(finding: Finding) -> str:
     words = ", ".join(finding.observable.outcomes)
     scale = finding.observable.record.scale
     number = f", or a number with its unit such as {scale.limits_example()}" if scale else ""
-    return f"{finding.key} cannot be {finding.value!r}; it takes {words}{number}"
+    return f"{finding.key} cannot be {brief(finding.value)}; it takes {words}{number}"
 
 
 def in_unit(number: float, unit: str, wanted: str, where: str) -> float:
@@ -126,18 +135,19 @@ def in_unit(number: float, unit: str, wanted: str, where: str) -> float:
     Raises:
         UsageError: unknown unit, or one of another kind.
     """
-    ours = _UNITS.get(unit.lower(), unit)
-    if ours in (wanted, _UNITS.get(wanted.lower(), wanted)):
+    ours, target = _UNITS.get(unit.lower(), unit), _UNITS.get(wanted.lower(), wanted)
+    if ours == target:
         return number
+    unknown = UsageError(f"{where}: unknown unit {brief(unit)}; accepted: {wanted}")
+    if not _UNIT.match(unit):
+        raise unknown
     registry, pint = _registry()
     try:
-        return float(registry.Quantity(number, ours).to(_UNITS.get(wanted.lower(), wanted)).m)
+        return float(registry.Quantity(number, ours).to(target).m)
     except pint.errors.DimensionalityError:
         raise UsageError(f"{where}: {unit} is not a unit of this reading ({wanted})") from None
-    except (pint.errors.PintError, AttributeError, ValueError, TypeError, SyntaxError):
-        raise UsageError(f"{where}: unknown unit {unit!r}; accepted: {wanted}") from None
-    except Exception as error:  # pint's tokenizer raises types of its own on odd text
-        raise UsageError(f"{where}: unknown unit {unit!r}; accepted: {wanted}") from error
+    except Exception:  # the library's parser raises types of its own on odd words
+        raise unknown from None
 
 
 @cache

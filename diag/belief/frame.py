@@ -105,6 +105,12 @@ class Frame:
         table = np.array(rows) if rows else np.zeros((0, self.none + 1))
         return table, np.array(list(found), dtype=np.int64)
 
+    @property
+    def most_promoted(self) -> float:
+        """Bound on the log by which promotion can raise a prior."""
+        table, _ = self.promotions
+        return float(np.maximum(table, 0.0).max(axis=1, initial=0.0).sum())
+
     def odds(self, worked_on: Collection[str] = ()) -> Array:
         """(modes + 1,) prior odds of each mode against its component being sound."""
         exposure = self.circuit.exposure

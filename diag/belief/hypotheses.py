@@ -25,12 +25,16 @@ from diag.circuit.model import UNLISTED, Circuit
 from diag.errors import DiagError
 
 MAX_FAULTS = 6
-BEAM = 300
+BEAM = 500
 TOLERANCE = 2e-5
+ENOUGH = 0.9999
+"""Estimated coverage below which the search is made once more, twice as wide."""
 SPARE = 25.0
 """Times the tolerance: share of a layer's weight that need not be grown further."""
-EXACT_BUDGET = 1_000_000
-"""Numbers in the closed sum that a step can afford."""
+EXACT_BUDGET = 20_000_000
+"""Numbers in the closed sum that certifies a coverage; some tenths of a second."""
+_TRIFLING = np.log(1e-5)
+"""Log share of the tolerance below which a hypothesis is left out unweighed."""
 _NEGLIGIBLE = np.log(1e-14)
 """Log share below which a hypothesis is not kept."""
 PAIRS = 2
@@ -137,8 +141,12 @@ class Engine:
         Raises:
             Contradiction: every hypothesis gives the findings probability zero.
         """
-        search = _Search(self, self.sights(findings), beam, max_faults)
+        sights = self.sights(findings)
+        search = _Search(self, sights, beam, max_faults)
         layers = search.run(tolerance)
+        if tolerance and not search.complete and _estimated(layers, search).value < ENOUGH:
+            search = _Search(self, sights, 2 * beam, max_faults)
+            layers = search.run(tolerance)
         return Posterior(self, tuple(findings), search.sights, search.relevant, layers, search)
 
 
@@ -232,7 +240,9 @@ class _Search:
         layers = [self._empty()]
         sums = [float(layers[0].log_joint[0])]
         while layers[-1].modes.shape[1] < self.max_faults:
-            grown = self._grow(layers[-1], SPARE * tolerance)
+            total = float(np.logaddexp.reduce(sums))
+            floor = total + np.log(tolerance) + _TRIFLING if tolerance else -np.inf
+            grown = self._grow(layers[-1], SPARE * tolerance, floor)
             if grown is None:
                 self.complete = all(share >= 1.0 for share in self.expanded)
                 break
@@ -263,37 +273,45 @@ class _Search:
         table, promoters = self.frame.promotions
         if not len(promoters) or not modes.size:
             return prior
-        present = np.stack([(modes == p).any(axis=1) for p in promoters], axis=1)
-        rows = np.flatnonzero(present.any(axis=1))
-        patterns, which = np.unique(present[rows], axis=0, return_inverse=True)
-        for number, pattern in enumerate(patterns):
-            mine = rows[which == number]
+        present = np.zeros(len(modes), dtype=np.int64)
+        for number, promoter in enumerate(promoters):
+            present += (modes == promoter).any(axis=1).astype(np.int64) << number
+        for code in np.unique(present[present > 0]).tolist():
+            mine = np.flatnonzero(present == code)
+            pattern = [bool(code >> number & 1) for number in range(len(promoters))]
             factors = table[pattern].sum(axis=0)
             raised = self.frame.normaliser(engine.odds * np.exp(factors))
             shared = np.log(raised / engine.normaliser).sum()
             prior[mine] += factors[modes[mine]].sum(axis=1) - shared
         return prior
 
-    def _grow(self, layer: Layer, spare: float) -> Layer | None:
-        """All hypotheses with one mode more than the weightiest of `layer`."""
+    def _grow(self, layer: Layer, spare: float, floor: float) -> Layer | None:
+        """All hypotheses with one mode more than the weightiest of `layer`.
+
+        Those whose log weight certainly lies below `floor` are left out unsorted.
+        """
         parents, share = self._parents(layer, spare)
-        row, column = np.nonzero(self._apart(parents))
-        if not len(row):
+        apart = self._apart(parents)
+        if not apart.any():
             return None
         self.expanded.append(share)
+        true, soft = self._likelihood(parents)
+        if np.isfinite(floor):
+            prior = self.log_prior(parents)[:, None] + self.engine.log_odds[self.modes]
+            apart &= prior + true > floor - self.frame.most_promoted
+        row, column = np.nonzero(apart)
         children = np.sort(np.column_stack([parents[row], self.modes[column]]), axis=1)
         code = np.zeros(len(children), dtype=np.int64)
         for k in range(children.shape[1]):
             code = code * (self.frame.none + 1) + children[:, k]
-        _, first = np.unique(code, return_index=True)
-        true, soft = self._likelihood(parents)
+        first = _first_of_each(code)
         at = (row[first], column[first])
         return self._layer(children[first], true[at], soft[at])
 
     def _apart(self, parents: Indices) -> NDArray[np.bool_]:
         """(parents, modes) whether the mode sits on a component that the parent leaves sound."""
         component = self.frame.component
-        apart = np.ones((len(parents), len(self.modes)), dtype=bool)
+        apart = np.ones((len(parents), len(self.modes)), dtype=np.bool_)
         for k in range(parents.shape[1]):
             apart &= component[parents[:, k]][:, None] != component[self.modes][None, :]
         return apart
@@ -332,6 +350,18 @@ class _Search:
         return layer.modes[np.sort(best)], share
 
 
+def _first_of_each(code: Indices) -> Indices:
+    """Indices of one row per distinct code, in the order of the codes."""
+    bits = int(len(code)).bit_length()
+    if int(code.max(initial=0)).bit_length() + bits > 62:
+        return np.unique(code, return_index=True)[1].astype(np.int64)
+    # One sort of plain integers, code above and row below, is much faster than an argsort.
+    packed = np.sort((code << bits) | np.arange(len(code)))
+    fresh = np.diff(packed >> bits, prepend=-1) != 0
+    found: Indices = packed[fresh] & ((1 << bits) - 1)
+    return found
+
+
 def _expected_next(sums: Sequence[float]) -> float:
     """Share that the next layer would add if the layers go on shrinking as they do.
 
@@ -358,7 +388,6 @@ class Posterior:
         modes: (hypotheses, size) mode indices, padded with `frame.none`; most likely first.
         weight: (hypotheses,) posterior probabilities, adding up to one.
         log_evidence: log P(findings) as far as enumerated, findings up to their own factor.
-        coverage: share of P(findings) that was enumerated.
     """
 
     def __init__(
@@ -377,10 +406,18 @@ class Posterior:
         joint = np.concatenate([layer.log_joint for layer in layers])
         self.log_evidence = float(np.logaddexp.reduce(joint))
         kept = np.flatnonzero(joint > self.log_evidence + _NEGLIGIBLE)
-        order = kept[np.argsort(-joint[kept], kind="stable")]
+        order = kept[np.argsort(-joint[kept])]
         self.modes = np.concatenate(padded)[order]
         self.weight = np.exp(joint[order] - self.log_evidence)
-        self.coverage = _coverage(self.log_evidence, layers, search)
+        self._layers, self._search = layers, search
+
+    @cached_property
+    def coverage(self) -> Coverage:
+        """Share of P(findings) that was enumerated: exact where the closed sum is affordable."""
+        if self._search.complete:
+            return Coverage(1.0, "enumerated")
+        exact = _exact(self.log_evidence, self._search)
+        return exact or _estimated(self._layers, self._search)
 
     @cached_property
     def marginals(self) -> Array:
@@ -427,19 +464,16 @@ def _padded(modes: Indices, size: int, none: int) -> Indices:
     return np.pad(modes, ((0, 0), (0, missing)), constant_values=none)
 
 
-def _coverage(enumerated: float, layers: Sequence[Layer], search: _Search) -> Coverage:
-    """Exact where the closed sum is cheap, otherwise from the size of the last layer."""
-    if search.complete:
-        return Coverage(1.0, "enumerated")
+def _exact(enumerated: float, search: _Search) -> Coverage | None:
+    """Coverage from the closed sum, where that is affordable."""
     sights = {n: [(s.digit, s.table) for s in group] for n, group in search.by_view.items()}
     exact = log_evidence(search.frame, search.engine.odds, sights, EXACT_BUDGET)
-    if exact is None:
-        return _estimated(layers, search)
-    return Coverage(min(float(np.exp(enumerated - exact)), 1.0), "exact sum")
+    return exact and Coverage(min(float(np.exp(enumerated - exact)), 1.0), "exact sum")
 
 
 def _estimated(layers: Sequence[Layer], search: _Search) -> Coverage:
-    """Coverage from how fast the layers shrink; cautious in both of its terms."""
+    """Coverage from how fast the layers shrink; cautious, for most of what was not grown
+    from one subset is grown from another."""
     total = np.logaddexp.reduce(np.concatenate([layer.log_joint for layer in layers]))
     share = [float(np.exp(np.logaddexp.reduce(la.log_joint) - total)) for la in layers]
     rest = 0.0

@@ -52,7 +52,7 @@ class Line:
     @staticmethod
     def of(passage: Passage, lost: Array) -> Line:
         """The passage with a share of its area lost (shape (N,))."""
-        losses = (passage.losses + 0.0 * lost) / (1.0 - lost) ** 2
+        losses = passage.losses / (1.0 - lost) ** 2
         return Line(np.array([passage.bore_mm * MM]), passage.length_m, losses)
 
 

@@ -51,6 +51,8 @@ class Opened(Event):
     """The crew's own words."""
     worked_on: tuple[str, ...] = ()
     """Components touched at the last maintenance."""
+    flights: Annotated[int, Field(ge=0)] | None = None
+    """Flights that the engine had made when the case was opened, where somebody counts them."""
 
 
 class Found(Event):

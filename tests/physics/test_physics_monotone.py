@@ -91,7 +91,7 @@ def never_moves_back(
 
 
 @pytest.mark.parametrize(("circuit", "case"), CASES)
-@settings(max_examples=6, deadline=None)
+@settings(max_examples=4, deadline=None)
 @given(background=backgrounds, day=days, share=st.floats(0.05, 0.6))
 def test_a_worse_fault_never_moves_its_quantity_back(
     circuit: str, case: Case, background: dict[str, float], day: dict[str, float], share: float
@@ -102,7 +102,7 @@ def test_a_worse_fault_never_moves_its_quantity_back(
 
 
 @pytest.mark.parametrize(("circuit", "case"), HYDRAULIC)
-@settings(max_examples=6, deadline=None)
+@settings(max_examples=4, deadline=None)
 @given(background=backgrounds, day=days, oil_c=st.floats(-20, 150))
 def test_at_a_given_temperature_pressure_never_moves_back_over_the_whole_range(
     circuit: str, case: Case, background: dict[str, float], day: dict[str, float], oil_c: float

@@ -194,7 +194,7 @@ class PlainSession:
     def _question(self, step: NextStep) -> None:
         observable = self.circuit.observables.get(step.id)
         if observable is None:
-            word = "close" if step.kind == "escalate" else f"fixed by {step.id}"
+            word = "close" if step.kind in ("escalate", "close") else f"fixed by {step.id}"
             self.say(f"  When it is done, answer: {word}")
         else:
             self.say(f"  {observable.record.question or observable.record.title}")
@@ -322,7 +322,7 @@ class PlainSession:
             self.say(f"  {event.number:>3}  {event_line(self.circuit, event)}")
 
     def _cannot(self, step: NextStep, why: str) -> None:
-        if step.kind == "escalate":
+        if step.kind in ("escalate", "close"):
             raise UsageError("handing over is always possible; `close` or `stop`")
         self._record(NotPossible(at=self.now(), by=self.by, step=step.id, reason=why.strip()))
 
@@ -447,6 +447,8 @@ def reason(step: NextStep) -> str:
     """Why this step, in a few words."""
     if step.kind == "rectification":
         return f"its cause is present with {percent(step.probability)}"
+    if step.kind == "close":
+        return f"no cause is left with {percent(step.probability)}"
     if step.kind == "escalate":
         return "no step left is worth its minutes"
     told = f"{step.information_bits:.2f} bits"

@@ -12,6 +12,8 @@ from datetime import datetime
 from functools import cached_property
 from typing import Any
 
+import numpy as np
+
 from diag.advice.steps import NOTICE, NextStep, Place, next_steps
 from diag.belief.conflict import conflict_bits
 from diag.belief.evidence import Finding, make_finding
@@ -283,7 +285,21 @@ class Assessment:
             self.state.done,
             self.state.unproven,
             recalled=not self.state.world,
+            sound=self.sound,
         )
+
+    @property
+    def sound(self) -> float:
+        """After verified rectifications: the probability that no cause is left; else 0."""
+        state = self.state
+        if not state.rectified or state.unproven:
+            return 0.0
+        posterior = self.posterior
+        chance = dict.fromkeys(posterior.frame.refs, 0.0)
+        for ref, success in state.world:
+            chance[ref] = 1.0 - (1.0 - chance[ref]) * (1.0 - success)
+        kept = np.array([chance[ref] for ref in posterior.frame.refs] + [1.0])
+        return float(posterior.weight @ kept[posterior.modes].prod(axis=1))
 
     @cached_property
     def conflict_bits(self) -> float:

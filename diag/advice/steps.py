@@ -46,7 +46,7 @@ class NextStep:
 
     id: str
     kind: str
-    """`indication`, `check`, `rectification` or `escalate`."""
+    """`indication`, `check`, `rectification`, `close` or `escalate`."""
     title: str
     minutes: float
     """Of the step itself."""
@@ -196,6 +196,22 @@ def escalation(circuit: Circuit) -> NextStep:
     )
 
 
+def closing(probability: float) -> NextStep:
+    """Closing the case once a rectification has been verified."""
+    return NextStep(
+        id="close",
+        kind="close",
+        title="Close the case: the rectification is verified",
+        minutes=0.0,
+        access_minutes=0.0,
+        information_bits=0.0,
+        probability=probability,
+        needs=(),
+        cautions=(),
+        reference=NO_REFERENCE,
+    )
+
+
 def checks_by_worth(
     circuit: Circuit, outlook: Outlook, place: Place, done: Iterable[str], recalled: bool
 ) -> list[NextStep]:
@@ -232,6 +248,7 @@ def next_steps(
     done: Iterable[str] = (),
     verify: Iterable[str] = (),
     recalled: bool = True,
+    sound: float = 0.0,
 ) -> list[NextStep]:
     """The steps in the order in which they are proposed.
 
@@ -243,6 +260,7 @@ def next_steps(
         done: findings taken and steps not possible.
         verify: findings that would prove a rectification done; they come first.
         recalled: indications may be taken from the report or the recorded data.
+        sound: after verified rectifications, the probability that no cause is left; else 0.
     """
     done, verify = set(done), list(verify)
     checks = checks_by_worth(circuit, outlook, place, done, recalled)
@@ -251,7 +269,8 @@ def next_steps(
     likely = [step for step in remedies if step.probability >= LIKELY_ENOUGH]
     telling = [s for s in checks if s.information_bits >= WORTH_A_LOOK and s not in proof]
     rest = [s for s in remedies if s not in likely and s.probability >= 1.0 - LIKELY_ENOUGH]
-    return [*proof, *likely, *telling, *rest, escalation(circuit)]
+    end = [closing(sound)] if sound >= LIKELY_ENOUGH else []
+    return [*proof, *end, *likely, *telling, *rest, escalation(circuit)]
 
 
 __all__ = [

@@ -166,7 +166,7 @@ class _Scene:
         self.block = frame.table(view[1])[:, columns]
         self.fixed = np.ones(side.states)
         self.varied: list[Sight] = []
-        self.touching = (self.block < 1.0).any(axis=1)
+        self.touching = np.asarray((self.block < 1.0).any(axis=1), dtype=np.bool_)
         for sight in sights:
             if len(sight.table) == 1:
                 self.fixed = self.fixed * sight.table[0]
@@ -313,7 +313,7 @@ class _Search:
         component = self.frame.component
         apart = np.ones((len(parents), len(self.modes)), dtype=np.bool_)
         for k in range(parents.shape[1]):
-            apart &= component[parents[:, k]][:, None] != component[self.modes][None, :]
+            apart &= component[parents[:, k], None] != component[None, self.modes]
         return apart
 
     def _likelihood(self, parents: Indices) -> tuple[Array, Array]:
@@ -468,7 +468,9 @@ def _exact(enumerated: float, search: _Search) -> Coverage | None:
     """Coverage from the closed sum, where that is affordable."""
     sights = {n: [(s.digit, s.table) for s in group] for n, group in search.by_view.items()}
     exact = log_evidence(search.frame, search.engine.odds, sights, EXACT_BUDGET)
-    return exact and Coverage(min(float(np.exp(enumerated - exact)), 1.0), "exact sum")
+    if exact is None:
+        return None
+    return Coverage(min(float(np.exp(enumerated - exact)), 1.0), "exact sum")
 
 
 def _estimated(layers: Sequence[Layer], search: _Search) -> Coverage:

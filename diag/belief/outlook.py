@@ -17,7 +17,7 @@ from diag.belief.hypotheses import Posterior
 from diag.circuit.model import Observable
 
 KEEP = 0.9999
-MOST = 1500
+MOST = 600
 
 
 class Outlook:

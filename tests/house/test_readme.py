@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import re
 import shlex
 import subprocess
@@ -12,14 +13,17 @@ ROOT = Path(__file__).resolve().parents[2]
 README = (ROOT / "README.md").read_text()
 
 
-def test_real_runs_are_real() -> None:
+def test_real_runs_are_real(tmp_path: Path) -> None:
     shown = re.findall(r"```console\n\$ (diag [^\n]+)\n(.*?)```", README, flags=re.DOTALL)
     assert len(shown) >= 2
     for command, printed in shown:
         words, _, given = command.partition(" < ")
         arguments = [sys.executable, "-m", *shlex.split(words)]
         text = (ROOT / given).read_text() if given else None
-        done = subprocess.run(arguments, cwd=ROOT, input=text, capture_output=True, text=True)
+        environment = {**os.environ, "PYTHONPATH": str(ROOT)}
+        done = subprocess.run(
+            arguments, cwd=tmp_path, env=environment, input=text, capture_output=True, text=True
+        )
         assert done.returncode == 0, done.stderr
         for passage in printed.split("[...]\n"):
             assert passage.rstrip("\n") in done.stdout, passage

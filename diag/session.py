@@ -8,16 +8,28 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
-from datetime import datetime
+from datetime import UTC, datetime
 from functools import cached_property
 from typing import Any
 
 import numpy as np
 
-from diag.advice.steps import NOTICE, NextStep, Place, next_steps
+from diag.advice.rules import (
+    Firing,
+    Odds,
+    Sighting,
+    Verdict,
+    View,
+    asked_again,
+    fired,
+    judge_findings,
+    minutes_between,
+    with_rules,
+)
+from diag.advice.steps import NOTICE, NextStep, Place, meets, next_steps
 from diag.belief.conflict import conflict_bits
-from diag.belief.evidence import Finding, make_finding
-from diag.belief.frame import World
+from diag.belief.evidence import Finding, make_finding, parse_finding
+from diag.belief.frame import Raised, World
 from diag.belief.hypotheses import Engine, Posterior
 from diag.belief.outlook import Outlook
 from diag.circuit.model import UNLISTED, Circuit
@@ -30,6 +42,7 @@ from diag.record.events import (
     NotPossible,
     Opened,
     Rectified,
+    RuleFired,
     Standing,
     StateChanged,
     Withdrawn,
@@ -47,6 +60,8 @@ class Taken:
     number: int
     finding: Finding
     complaint: bool
+    at: datetime
+    minutes_after_stop: float | None = None
     superseded: bool = False
 
 
@@ -75,7 +90,7 @@ class CaseState:
 
     @property
     def findings(self) -> tuple[Finding, ...]:
-        """Findings that count: neither withdrawn nor superseded."""
+        """Findings that stand: neither withdrawn nor superseded."""
         return tuple(t.finding for t in self.taken if not t.superseded)
 
     @property
@@ -136,8 +151,16 @@ def _found(state: CaseState, event: Found) -> CaseState:
         for t in state.taken
     )
     proven = tuple(v for v in state.unproven if v != finding.key)
-    new = Taken(event.number, finding, event.complaint)
+    new = Taken(event.number, finding, event.complaint, event.at, _after_stop(state, event))
     return replace(state, taken=(*taken, new), unproven=proven)
+
+
+def _after_stop(state: CaseState, event: Found) -> float | None:
+    """Minutes after shutdown: as the person says, else since the engine was reported stopped."""
+    place = state.place
+    if event.minutes_after_stop is not None or place.since is None:
+        return event.minutes_after_stop
+    return minutes_between(place.since, event.at) if meets("stopped", place.engine) else None
 
 
 def _doubted(state: CaseState, event: Doubted) -> CaseState:
@@ -166,7 +189,11 @@ def _state_changed(state: CaseState, event: StateChanged) -> CaseState:
         if name not in circuit.openings:
             raise UnknownName("opening", name, circuit.openings)
     opened = (state.place.opened | set(event.opened)) - set(event.closed)
-    return replace(state, place=Place(engine, opened))
+    # Cooling down is no new state of rest: the clock runs from the stop.
+    rests = meets("stopped", engine) and meets("stopped", state.place.engine)
+    since = event.at if event.engine and not (rests and state.place.since) else state.place.since
+    near = state.place.people_near if event.people_clear is None else not event.people_clear
+    return replace(state, place=Place(engine, opened, since, near))
 
 
 def _rectified(state: CaseState, event: Rectified) -> CaseState:
@@ -233,16 +260,50 @@ _STEPS: Mapping[type, Callable[[CaseState, Any], CaseState]] = {
 }
 
 
+def rule_view(state: CaseState) -> View:
+    """The case as rules look at it, before any odds are known."""
+    sightings: dict[str, Sighting] = {}
+    for taken in state.taken:
+        if taken.finding.world != state.world and taken.finding.key in sightings:
+            continue
+        earlier = sightings.get(taken.finding.key)
+        previous = (earlier.finding, earlier.at) if earlier else None
+        sightings[taken.finding.key] = Sighting(
+            taken.finding, taken.at, taken.minutes_after_stop, previous
+        )
+    head = state.opened
+    return View(
+        circuit=state.circuit,
+        sightings=sightings,
+        now=state.events[-1].at if state.events else datetime.min.replace(tzinfo=UTC),
+        place=state.place,
+        worked_on=frozenset(head.worked_on if head else ()),
+        both_engines=head.both_engines if head else False,
+    )
+
+
+def counted_findings(state: CaseState, verdict: Verdict) -> tuple[Finding, ...]:
+    """The findings that count: those that stand, as the rules leave them."""
+    kept = [f for f in state.findings if f.key not in verdict.ignored or f.world != state.world]
+    added = [parse_finding(state.circuit, text) for text in verdict.added]
+    return (*kept, *(replace(finding, world=state.world) for finding in added))
+
+
+def _firing_key(firing: Firing) -> tuple[str, ...]:
+    return (firing.rule.id, *firing.because)
+
+
 class Assessment:
     """What the findings of one state mean: causes, hypotheses and the next steps.
 
     Args:
-        posterior: of the findings of the case.
+        posterior: of the findings that count.
         state: the case.
+        verdict: what the rules decided about the findings.
     """
 
-    def __init__(self, posterior: Posterior, state: CaseState) -> None:
-        self.posterior, self.state = posterior, state
+    def __init__(self, posterior: Posterior, state: CaseState, verdict: Verdict) -> None:
+        self.posterior, self.state, self.verdict = posterior, state, verdict
         self.circuit = state.circuit
 
     @cached_property
@@ -274,9 +335,14 @@ class Assessment:
         causes = tuple((ref, round(p, 6)) for ref, p in rows[:TOP])
         return Standing(causes=causes)
 
+    @property
+    def _recalled(self) -> bool:
+        """Indications may be taken from the report until something was rectified."""
+        return not self.state.world
+
     @cached_property
-    def steps(self) -> list[NextStep]:
-        """Steps in the order in which they are proposed."""
+    def _by_worth(self) -> list[NextStep]:
+        """Steps before the rules had their say."""
         return next_steps(
             self.circuit,
             self.outlook,
@@ -284,9 +350,51 @@ class Assessment:
             self.state.place,
             self.state.done,
             self.state.unproven,
-            recalled=not self.state.world,
+            recalled=self._recalled,
             sound=self.sound,
         )
+
+    @cached_property
+    def firings(self) -> tuple[Firing, ...]:
+        """Every rule that applies now, with its grounds."""
+        odds = Odds(self.chance, lambda: self.conflict_bits, self._nothing_worth)
+        view = replace(rule_view(self.state), odds=odds)
+        return (*self.verdict.firings, *fired(view, ("hold", "caution", "repeat", "escalate")))
+
+    def _nothing_worth(self) -> bool:
+        return self._by_worth[0].kind == "escalate"
+
+    def chance(self, name: str) -> float:
+        """Probability of COMPONENT.MODE, COMPONENT, `unlisted` or `nothing`."""
+        if name in ("unlisted", "nothing"):
+            return self.unlisted if name == "unlisted" else self.posterior.nothing_wrong
+        if "." in name:
+            return self.marginals[name]
+        return sum(p for ref, p in self.marginals.items() if ref.partition(".")[0] == name)
+
+    @cached_property
+    def _ruled(self) -> tuple[list[NextStep], list[NextStep]]:
+        view, recalled = rule_view(self.state), self._recalled
+        free, held = with_rules(self._by_worth, self.firings, view, recalled)
+        again = asked_again(self.firings, view, self.state.not_possible, recalled)
+        first, more = with_rules(again, self.firings, view, recalled)
+        named = {step.id for step in first}
+        rest = [step for step in free if step.id not in named]
+        alarm = [f.rule.text for f in self.firings if f.rule.kind == "escalate"]
+        if alarm:
+            end = replace(rest[-1], note=" ".join(alarm))
+            rest = [end, *(step for step in rest if step.kind != "escalate")]
+        return [*first, *rest], [*more, *held]
+
+    @property
+    def steps(self) -> list[NextStep]:
+        """Steps in the order in which they are proposed."""
+        return self._ruled[0]
+
+    @property
+    def held(self) -> list[NextStep]:
+        """Steps that a rule holds now, with the reasons."""
+        return self._ruled[1]
 
     @property
     def sound(self) -> float:
@@ -319,7 +427,7 @@ class Session:
         self.circuit = circuit
         self.state = CaseState(circuit)
         self._save = save
-        self._engines: dict[tuple[str, ...], Engine] = {}
+        self._engines: dict[tuple[object, ...], Engine] = {}
         self._posteriors: dict[tuple[object, ...], Posterior] = {}
         self._assessed: Assessment | None = None
 
@@ -335,10 +443,11 @@ class Session:
         session.state = fold(circuit, events)
         return session
 
-    def _engine(self, worked_on: tuple[str, ...]) -> Engine:
-        if worked_on not in self._engines:
-            self._engines[worked_on] = Engine(self.circuit, worked_on)
-        return self._engines[worked_on]
+    def _engine(self, worked_on: tuple[str, ...], raised: Raised) -> Engine:
+        key = (worked_on, raised)
+        if key not in self._engines:
+            self._engines[key] = Engine(self.circuit, worked_on, raised=raised)
+        return self._engines[key]
 
     @property
     def assessment(self) -> Assessment:
@@ -349,11 +458,13 @@ class Session:
 
     def _assess(self, state: CaseState) -> Assessment:
         worked_on = state.opened.worked_on if state.opened else ()
-        key = (worked_on, *((f.key, f.value, f.trust, f.world) for f in state.findings))
+        verdict = judge_findings(rule_view(state))
+        counted = counted_findings(state, verdict)
+        key = (worked_on, verdict.raised, *((f.key, f.value, f.trust, f.world) for f in counted))
         if key not in self._posteriors:
-            made = self._engine(worked_on).posterior(state.findings)
+            made = self._engine(worked_on, verdict.raised).posterior(counted)
             self._posteriors = {key: made}
-        return Assessment(self._posteriors[key], state)
+        return Assessment(self._posteriors[key], state, verdict)
 
     def add(self, event: AnyEvent) -> AnyEvent:
         """Adds one event: checked, weighed, saved, and only then acknowledged.
@@ -364,13 +475,34 @@ class Session:
             JournalError: the event is part of the case in memory but could not be saved.
         """
         before = self.assessment.standing if self.state.opened else None
+        known = {_firing_key(f) for f in self.assessment.firings} if self.state.opened else set()
         numbered = event.model_copy(update={"number": len(self.state.events), "before": before})
         after = self._assess(advance(self.state, numbered)).standing
         full = numbered.model_copy(update={"after": after})
-        self.state = advance(self.state, full)
-        if self._save is not None:
-            self._save(full)
+        self._keep(full)
+        if not isinstance(event, Closed):
+            self._record_rules(full, known)
         return full
+
+    def _keep(self, event: AnyEvent) -> None:
+        self.state = advance(self.state, event)
+        if self._save is not None:
+            self._save(event)
+
+    def _record_rules(self, cause: AnyEvent, known: set[tuple[str, ...]]) -> None:
+        """Writes down every rule that fires since `cause` and did not before."""
+        for firing in self.assessment.firings:
+            if _firing_key(firing) not in known:
+                self._keep(
+                    RuleFired(
+                        at=cause.at,
+                        number=len(self.state.events),
+                        rule=firing.rule.id,
+                        kind=firing.rule.kind,
+                        because=firing.because,
+                        text=firing.rule.text,
+                    )
+                )
 
     def find(self, at: datetime, name: str, point: str | None, value: str, **more: Any) -> AnyEvent:
         """Adds a finding; `more` as in `Found`."""

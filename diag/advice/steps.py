@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
+from datetime import datetime
 
 from diag.belief.outlook import Outlook
 from diag.circuit.model import Circuit, Observable, Remedy
@@ -38,6 +39,9 @@ class Place:
 
     engine: str = "cold"
     opened: frozenset[str] = frozenset()
+    since: datetime | None = None
+    """When the engine reached this state, where that is known."""
+    people_near: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,6 +62,10 @@ class NextStep:
     needs: tuple[str, ...]
     cautions: tuple[str, ...]
     reference: str
+    held: tuple[str, ...] = ()
+    """Why it may not be done now; empty where it may."""
+    note: str = ""
+    """Why it is asked again, where a rule asks for it."""
 
     @property
     def expected_minutes(self) -> float:
@@ -85,10 +93,15 @@ def needs_of(observable: Observable, recalled: bool) -> Needs:
     return needs
 
 
+def meets(needed: str, state: str) -> bool:
+    """Whether a step that needs one engine state can be done in another."""
+    return state in _MEETS.get(needed, {needed})
+
+
 def access_minutes(circuit: Circuit, needs: Needs, place: Place) -> float:
     """Minutes to reach the state and openings from `place`, closing up included."""
     total = 0.0
-    if place.engine not in _MEETS.get(needs.engine, {needs.engine}):
+    if not meets(needs.engine, place.engine):
         states = circuit.engine_states
         total += states[needs.engine].reach_minutes + states[place.engine].leave_minutes
     for name in wanted_openings(circuit, needs, place):

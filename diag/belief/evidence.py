@@ -9,10 +9,9 @@ from __future__ import annotations
 
 import math
 import re
+from bisect import bisect
 from collections.abc import Iterable
 from dataclasses import dataclass
-from functools import cache
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +19,7 @@ from numpy.typing import NDArray
 from diag.circuit.model import Circuit, Observable
 from diag.circuit.reading import brief
 from diag.circuit.records import Scale
+from diag.circuit.units import in_unit, split_number
 from diag.errors import UsageError
 
 Array = NDArray[np.float64]
@@ -29,17 +29,7 @@ MISREAD = 0.005
 
 LONGEST = 200
 """Characters in a finding as it is written."""
-_NUMBER = re.compile(
-    r"^([-+]?(?:\d{1,20}\.?\d{0,20}|\.\d{1,20})(?:[eE][-+]?\d{1,3})?)\s*([^\d\s].*)?$", re.ASCII
-)
 _FINDING = re.compile(r"^([a-zA-Z][\w-]*)(?:@([a-zA-Z][\w-]*))?=(.+)$", re.ASCII)
-_UNIT = re.compile(r"^[a-zA-Z°%µ][a-zA-Z_°%µ]*(?: ?/ ?[a-zA-Z]+)?$")
-"""A plain unit, such as psi, degC or L/h; anything more is no unit a gauge is marked in."""
-_UNITS = {
-    "c": "degC", "°c": "degC", "celsius": "degC", "f": "degF", "°f": "degF", "l": "litre",
-    "ltr": "litre", "liter": "litre", "litres": "litre", "liters": "litre", "qt": "quart",
-    "qts": "quart", "psig": "psi", "psid": "psi", "%": "percent", "gal": "gallon",
-}  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,12 +97,12 @@ def number_of(finding: Finding) -> float | None:
     observable = finding.observable
     if finding.value in observable.outcomes:
         return None
-    match, scale = _NUMBER.match(finding.value), observable.record.scale
-    if match is None or scale is None:
+    parts, scale = split_number(finding.value), observable.record.scale
+    if parts is None or scale is None:
         raise UsageError(_not_taken(finding))
-    number, unit = float(match[1]), (match[2] or "").strip()
+    number, unit = parts
     if not unit:
-        example = f"{match[1]}{scale.unit}"
+        example = f"{finding.value}{scale.unit}"
         raise UsageError(f"{finding}: the number needs its unit, for example {example}")
     value = in_unit(number, unit, scale.unit, finding.key)
     low, high = scale.range
@@ -129,35 +119,6 @@ def _not_taken(finding: Finding) -> str:
     return f"{finding.key} cannot be {brief(finding.value)}; it takes {words}{number}"
 
 
-def in_unit(number: float, unit: str, wanted: str, where: str) -> float:
-    """`number` converted from `unit` to `wanted`.
-
-    Raises:
-        UsageError: unknown unit, or one of another kind.
-    """
-    ours, target = _UNITS.get(unit.lower(), unit), _UNITS.get(wanted.lower(), wanted)
-    if ours == target:
-        return number
-    unknown = UsageError(f"{where}: unknown unit {brief(unit)}; accepted: {wanted}")
-    if not _UNIT.match(unit):
-        raise unknown
-    registry, pint = _registry()
-    try:
-        return float(registry.Quantity(number, ours).to(target).m)
-    except pint.errors.DimensionalityError:
-        raise UsageError(f"{where}: {unit} is not a unit of this reading ({wanted})") from None
-    except Exception:  # the library's parser raises types of its own on odd words
-        raise unknown from None
-
-
-@cache
-def _registry() -> tuple[Any, Any]:
-    # Imported on first use: it costs a good part of a second.
-    import pint
-
-    return pint.UnitRegistry(), pint
-
-
 def state_likelihood(finding: Finding) -> Array:
     """(states,) P(finding | state shown by the instrument), up to a common factor."""
     number = number_of(finding)
@@ -169,6 +130,14 @@ def state_likelihood(finding: Finding) -> Array:
         given = band_likelihood(observable.record.scale, observable.cuts, number)
     trusted: Array = finding.trust * given + (1.0 - finding.trust) * given.mean()
     return trusted
+
+
+def outcome_of(finding: Finding) -> str:
+    """The outcome word of a finding; a number counts as the state in whose band it lies."""
+    number, observable = number_of(finding), finding.observable
+    if number is None:
+        return finding.value
+    return observable.outcomes[observable.reports[bisect(observable.cuts, number)]]
 
 
 def outcome_table(observable: Observable) -> Array:

@@ -20,6 +20,8 @@ from diag.circuit.records import Effect, Signal
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
+Raised = tuple[tuple[str, float], ...]
+"""Components with factors on the prior odds of their modes."""
 World = tuple[tuple[str, float], ...]
 """Modes restored since the complaint, each with the chance that it worked; () as found."""
 
@@ -111,13 +113,19 @@ class Frame:
         table, _ = self.promotions
         return float(np.maximum(table, 0.0).max(axis=1, initial=0.0).sum())
 
-    def odds(self, worked_on: Collection[str] = ()) -> Array:
-        """(modes + 1,) prior odds of each mode against its component being sound."""
+    def odds(self, worked_on: Collection[str] = (), raised: Raised = ()) -> Array:
+        """(modes + 1,) prior odds of each mode against its component being sound.
+
+        Args:
+            worked_on: components touched at the last maintenance.
+            raised: components with further factors on their odds.
+        """
+        factors = dict(raised)
         exposure = self.circuit.exposure
         odds = np.ones(self.none + 1)
         for ref, mode in self.circuit.modes.items():
             factor = exposure.worked_on_factor if mode.component in worked_on else 1.0
-            odds[self.index[ref]] = mode.odds * factor
+            odds[self.index[ref]] = mode.odds * factor * factors.get(mode.component, 1.0)
         share = self.circuit.file.unlisted.share
         odds[self.index[UNLISTED]] = share / (1.0 - share) * odds[: self.none - 1].sum()
         return odds

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 
 from diag.belief.evidence import Finding, state_likelihood
 from diag.belief.exact import log_evidence
-from diag.belief.frame import Array, Frame, Indices, World, state_chances
+from diag.belief.frame import Array, Frame, Indices, Raised, World, state_chances
 from diag.circuit.model import UNLISTED, Circuit
 from diag.errors import DiagError
 
@@ -92,15 +92,20 @@ class Engine:
     Args:
         circuit: the circuit.
         worked_on: components touched at the last maintenance; their odds are raised.
+        raised: components with further factors on their odds.
         odds: prior odds per mode (modes + 1,) in place of the circuit's own.
     """
 
     def __init__(
-        self, circuit: Circuit, worked_on: Collection[str] = (), odds: Array | None = None
+        self,
+        circuit: Circuit,
+        worked_on: Collection[str] = (),
+        odds: Array | None = None,
+        raised: Raised = (),
     ) -> None:
         self.circuit = circuit
         self.frame = Frame(circuit)
-        self.odds = self.frame.odds(worked_on) if odds is None else odds
+        self.odds = self.frame.odds(worked_on, raised) if odds is None else odds
 
     @cached_property
     def normaliser(self) -> Array:

@@ -40,6 +40,8 @@ from diag.circuit.records import (
     Step,
 )
 from diag.circuit.references import REFERENCE_CHECKS, Named
+from diag.circuit.rule_checks import rules_known
+from diag.circuit.rules import Rule, RulesFile, named_places
 from diag.errors import Origin
 
 Observation: TypeAlias = Indication | Check
@@ -56,6 +58,8 @@ class Parts:
     cautions: CautionsFile | None
     sources: SourcesFile | None
     overlays: list[Overlay]
+    shared_rules: list[RulesFile] = field(default_factory=list)
+    rules: list[RulesFile] = field(default_factory=list)
     kinds: dict[str, Kind] = field(default_factory=dict)
 
     def records(self) -> Iterator[Record]:
@@ -63,6 +67,7 @@ class Parts:
         files = (self.shared_conditions, self.shared_checks, self.cautions, self.sources)
         yield from (file for file in files if file is not None)
         yield from (*self.links, *self.observations, *self.overlays, *self.kinds.values())
+        yield from (*self.shared_rules, *self.rules)
 
 
 class Assembly:
@@ -108,6 +113,7 @@ class Assembly:
             sources=sources.sources if sources else {},
             overlays=tuple(o.overlay for o in self.overlays.given),
             content_hash=self.content_hash,
+            rules=self._rules(observables),
         )
         self._check_references(circuit, observations)
         return circuit
@@ -129,6 +135,15 @@ class Assembly:
         read = [self.conditions_file, *self.parts.records()]
         for check in REFERENCE_CHECKS:
             check(Named(circuit, steps, read), self.faults)
+        rules_known(circuit, self.faults)
+
+    def _rules(self, observables: Mapping[str, Observable]) -> tuple[Rule, ...]:
+        """The circuit's own rules, and the shared ones whose observations it has."""
+        shared = [rule for file in self.parts.shared_rules for rule in file.rules]
+        own = [rule for file in self.parts.rules for rule in file.rules]
+        kept = [r for r in shared if all(place in observables for place in named_places(r))]
+        self.faults.unique((*own, *shared))
+        return (*kept, *own)
 
     # -- components and modes ---------------------------------------------------------
 

@@ -42,6 +42,8 @@ from diag.circuit.records import (
     SharedConditionsFile,
     SourcesFile,
 )
+from diag.circuit.rule_checks import rule_doubts
+from diag.circuit.rules import RulesFile
 from diag.errors import InputError, Origin, Problem, UnknownName
 
 M = TypeVar("M", bound=BaseModel)
@@ -143,6 +145,8 @@ class _Reader:
             shared_checks=self.read(ObservationsFile, shared / "checks.yaml"),
             cautions=self.read(CautionsFile, shared / "cautions.yaml"),
             sources=self.read(SourcesFile, shared / "sources.yaml"),
+            shared_rules=self.read_all(RulesFile, shared, "rules"),
+            rules=self.read_all(RulesFile, folder, "rules"),
             overlays=[o for path in overlays if (o := self.overlay(path, head))],
             kinds=self.kinds(document, folder),
         )
@@ -155,6 +159,8 @@ class _Reader:
         if "components" not in self.faults.unsure:
             whole = "lines" not in self.faults.unsure
             self.faults.problems.extend(structure_problems(circuit, whole))
+        if not self.faults.problems:
+            self.faults.problems.extend(rule_doubts(circuit))
         return circuit
 
     def overlay(self, path: Path, head: CircuitFile | None) -> Overlay | None:

@@ -20,6 +20,7 @@ from diag.circuit.records import (
     Rate,
     Rectification,
 )
+from diag.circuit.rules import Rule
 from diag.errors import Origin, UnknownName
 
 UNLISTED = "unlisted.present"
@@ -128,6 +129,7 @@ class Circuit:
     overlays: tuple[str, ...]
     content_hash: str
     """SHA-256 over all that was read, overlays included."""
+    rules: tuple[Rule, ...] = ()
 
     def __repr__(self) -> str:
         return f"<Circuit {self.id} {self.file.version}>"

@@ -51,6 +51,8 @@ class Opened(Event):
     """The crew's own words."""
     worked_on: tuple[str, ...] = ()
     """Components touched at the last maintenance."""
+    both_engines: bool = False
+    """The other engine shows the same after the same visit."""
     flights: Annotated[int, Field(ge=0)] | None = None
     """Flights that the engine had made when the case was opened, where somebody counts them."""
 
@@ -65,6 +67,8 @@ class Found(Event):
     """As the person gave it, `low` or `52psi`."""
     complaint: bool = False
     """Part of the report, before any check was asked for."""
+    minutes_after_stop: Annotated[float, Field(ge=0.0, le=1e6)] | None = None
+    """When it was taken after shutdown, where the person says so."""
     reference: Line = ""
     """Task in the approved maintenance data that was followed."""
     remark: Line = ""

@@ -11,6 +11,7 @@ What counts, and why:
   leave no line: it is evidence of its condition, but says nothing of how reliable the
   indication is. Findings asked for later count in full: which one was asked for depended on
   what the log records, so those not asked for are missing at random.
+- The verification was repeated until it came out well, so it proves the fix and nothing else.
 - A doubted finding counts for nothing here.
 """
 
@@ -25,10 +26,12 @@ from typing import NamedTuple
 from diag.belief.evidence import make_finding, state_likelihood
 from diag.circuit.model import Circuit, Observable
 from diag.errors import DiagError, InputError
-from diag.record.casefile import CaseFile, case_file, why_not_confirmed
+from diag.record.casefile import CaseFile, case_file, key_of, why_not_confirmed
 from diag.record.events import Found
 from diag.record.skim import skim
 
+IDENTITY = 16
+"""Hexadecimal digits kept of a case's identity: 64 bits tell millions of cases apart."""
 CHUNK = 250
 """Logs read in one task; sending the circuit along costs about as much as reading ten."""
 
@@ -58,7 +61,7 @@ class Case(NamedTuple):
     """What one closed case says."""
 
     identity: str
-    digest: str
+    """Hash of the first line: copies share it, and so does a copy that was carried on."""
     causes: tuple[str, ...]
     arisen: tuple[str, ...]
     """Causes that count for their rate: not promoted by another cause of the case, and not on
@@ -91,15 +94,16 @@ class Harvest:
     arisen: Counter[str] = field(default_factory=Counter)
     complained: set[str] = field(default_factory=set)
     counted: list[str] = field(default_factory=list)
-    """Identities of the cases counted, in the order in which they came."""
+    """Identities of the cases counted, shortened, in the order in which they came."""
 
     def take(self, log: str, case: Case) -> None:
         """Adds one case, unless it was counted before."""
-        if {case.identity, case.digest} & self.known:
+        identity = case.identity[:IDENTITY]
+        if identity in self.known:
             self.left_out.append(LeftOut(log, "counted already"))
             return
-        self.known |= {case.identity, case.digest}
-        self.counted.append(case.identity)
+        self.known.add(identity)
+        self.counted.append(identity)
         self.cases += 1
         self.scenes.update(case.scenes)
         self.arisen.update(case.arisen)
@@ -119,7 +123,7 @@ def gather(
     `joblib.parallel_config(backend="dask")` it runs on that cluster.
 
     Args:
-        counted: identities of cases that an overlay holds already.
+        counted: shortened identities of cases that an overlay holds already.
         jobs: processes; -1 for one on every core.
         progress: called with the number of logs read since it was last called.
     """
@@ -163,7 +167,7 @@ class _Reader:
                 return LeftOut(log, "another circuit")
             if reason := why_not_confirmed(self.circuit, case):
                 return LeftOut(log, reason)
-            return self._case(case, sound.identity, sound.digest)
+            return self._case(case, sound.identity)
         except InputError as error:
             return LeftOut(log, f"unsound: {error}")
         except DiagError as error:
@@ -171,13 +175,12 @@ class _Reader:
         except (AttributeError, TypeError, ValueError):
             return LeftOut(log, "unsound: its fields are not those of a case")
 
-    def _case(self, case: CaseFile, identity: str, digest: str) -> Case:
+    def _case(self, case: CaseFile, identity: str) -> Case:
         assert case.closed is not None
         truth = tuple(sorted(set(case.closed.causes)))
         nodes = {self.circuit.observable(f.name, f.point).node for f in case.complaint}
         return Case(
             identity,
-            digest,
             truth,
             tuple(ref for ref in truth if self._arose(ref, truth, case.head.worked_on)),
             tuple(sorted(nodes)),
@@ -192,14 +195,12 @@ class _Reader:
         spans = {ref: self._span(case, ref) for ref in truth}
         seen: dict[tuple[str, tuple[str, ...]], dict[str, tuple[Found, Observable]]] = {}
         present: dict[int, tuple[str, ...]] = {}
-        for found in case.found:
+        for found in filter(_telling(case), case.found):
             done = case.after[found.number]
             if any(first <= done < last for first, last in spans.values()):
                 continue
             there = tuple(ref for ref in truth if done < spans[ref][0])
             observable = self.circuit.observable(found.name, found.point)
-            if found.number in case.trust:
-                continue
             node = self.circuit.nodes[observable.node]
             causes = tuple(ref for ref in there if ref in node.effects)
             # A repeat with the same tool on the same state is no second proof: the last counts.
@@ -249,6 +250,17 @@ class _Reader:
                 chances = state_likelihood(finding)
                 self._understood[key] = tuple((chances / chances.max()).tolist())
         return self._understood[key]
+
+
+def _telling(case: CaseFile) -> Callable[[Found], bool]:
+    """Whether a finding was neither doubted nor chosen for how it came out."""
+    proof, done = case.proof, len(case.rectified)
+
+    def tells(found: Found) -> bool:
+        proves = proof is not None and key_of(found) == key_of(proof)
+        return found.number not in case.trust and not (proves and case.after[found.number] == done)
+
+    return tells
 
 
 def _coarse(numbers: Sequence[float]) -> tuple[float, ...]:

@@ -193,13 +193,9 @@ def learned_rates(
         UsageError, UnknownName: as `learn`.
     """
     caught = complaint_chance(circuit)
+    _check_fleet(circuit, fleet)
     hours = fleet.hours if fleet.hours is not None else _balanced_hours(circuit, arisen, caught)
-    if not (0.0 < hours < 1e12) or any(not 0.0 <= n < 1e12 for n in fleet.events.values()):
-        raise UsageError("hours and events of the fleet must be positive numbers")
     exposure = circuit.exposure
-    for name in fleet.events:
-        if name not in exposure.events:
-            raise UnknownName("event", name, exposure.events)
     numbers = []
     for ref, mode in circuit.modes.items():
         x = float(arisen.get(ref, 0))
@@ -210,7 +206,16 @@ def learned_rates(
             usual = exposure.events.get(rate.event, 0.0) * hours / exposure.hours
             events = fleet.events.get(rate.event, usual)
             numbers.append(_eventual(ref, rate.per_event, x, events * caught[ref], weights))
-    return hours, numbers
+    return hours, [number for number in numbers if number.out_of > 0.0]
+
+
+def _check_fleet(circuit: Circuit, fleet: Fleet) -> None:
+    given = [*fleet.events.values(), *([] if fleet.hours is None else [fleet.hours])]
+    if any(not 0.0 < number < 1e12 for number in given):
+        raise UsageError("hours and events of the fleet must be positive numbers")
+    for name in fleet.events:
+        if name not in circuit.exposure.events:
+            raise UnknownName("event", name, circuit.exposure.events)
 
 
 def _balanced_hours(
@@ -225,7 +230,7 @@ def _balanced_hours(
         elif mode.rate.per_event is not None and mode.rate.event is not None:
             often = exposure.events.get(mode.rate.event, 0.0) / exposure.hours
             expected += mode.rate.per_event * often * caught[ref]
-    return max(sum(arisen.values()), 0.5) / expected
+    return sum(arisen.values()) / expected if expected > 0.0 else 0.0
 
 
 def _hourly(ref: str, before: float, x: float, hours: float, weights: Weights) -> Number:

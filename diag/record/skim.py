@@ -34,16 +34,11 @@ _BEFORE = re.compile(rb'"hash_before":"([0-9a-f]{64})",')
 
 @dataclass(frozen=True, slots=True)
 class Skimmed:
-    """A sound log.
-
-    Attributes:
-        identity: hash of its first line; a copy that was carried on shares it.
-        digest: hash of its last line, hence of everything before it too.
-    """
+    """A sound log."""
 
     events: tuple[AnyEvent, ...]
     identity: str
-    digest: str
+    """Hash of its first line: copies share it, and so does a copy that was carried on."""
 
 
 def skim(path: str | os.PathLike[str]) -> Skimmed:
@@ -62,12 +57,11 @@ def skim(path: str | os.PathLike[str]) -> Skimmed:
     lines = content.splitlines(keepends=True)
     if not lines:
         raise InputError("empty")
-    before, found, digests = START, [], []
+    before, found = START, []
     for number, raw in enumerate(lines):
         found.append(_event(raw, number, before))
         before = hashlib.sha256(raw).hexdigest()
-        digests.append(before)
-    return Skimmed(tuple(found), digests[0], digests[-1])
+    return Skimmed(tuple(found), hashlib.sha256(lines[0]).hexdigest())
 
 
 def _event(raw: bytes, number: int, before: str) -> AnyEvent:

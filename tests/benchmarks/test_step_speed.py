@@ -1,0 +1,291 @@
+"""How long a step takes, against general-purpose libraries; cold start, memory, coverage.
+
+Run alone on a quiet machine; five minutes, most of them spent waiting for the libraries:
+
+    python -m pytest tests/benchmarks/test_step_speed.py -s
+"""
+
+from __future__ import annotations
+
+import json
+import math
+import statistics
+import subprocess
+import sys
+import time
+from collections.abc import Iterator
+from dataclasses import dataclass
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+from diag.belief.exact import log_evidence
+from diag.circuit.loading import load_circuit
+from diag.circuit.model import Circuit
+from diag.record.events import Rectified
+from diag.session import Session
+from tests.benchmarks.subject import NOW, PUMP_WEAR, Subject, find, findings_of, open_case
+from tests.examples import EXAMPLES, Example
+
+ROOT = Path(__file__).resolve().parents[2]
+TEN = 10
+RUNS = 20
+STEP_SECONDS = 0.060
+TIMES_FASTER = {"pgmpy": 100.0, "pyagrum": 10.0}
+LADDER = {"pgmpy": range(2, TEN + 2), "pyagrum": range(4, TEN + 2)}
+"""Findings in the cut-down circuit, from a size that is no trouble upwards."""
+PATIENCE = 60.0
+"""Seconds that a library gets for one step, its start and its network included."""
+COLD_SECONDS = 1.5
+RESIDENT_MB = 250.0
+COVERED = 0.9999
+SUM_BUDGET = 300_000_000
+"""Numbers in the closed sum that a benchmark can afford."""
+
+
+# -- one step ----------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Step:
+    """One measured step: seconds, and where the case stands after it."""
+
+    seconds: float
+    session: Session
+
+
+def measured(circuit: Circuit, before: list[str], added: str) -> Step:
+    """Adds one finding; the posteriors and the value of every check are there when it ends."""
+    session = open_case(circuit)
+    for text in before:
+        find(session, text)
+    assert session.assessment.steps  # as it stood on the screen when the answer came
+    start = time.perf_counter()
+    find(session, added)
+    assert session.assessment.marginals
+    assert session.assessment.steps
+    return Step(time.perf_counter() - start, session)
+
+
+def milliseconds(values: list[float]) -> str:
+    low, middle, high = min(values), statistics.median(values), max(values)
+    return f"median {middle * 1e3:.1f} ms, min {low * 1e3:.1f}, max {high * 1e3:.1f}"
+
+
+def next_answers(session: Session) -> list[str]:
+    """The case's own next findings, then the checks proposed, each with a likely answer."""
+    answers = findings_of(PUMP_WEAR)[TEN : TEN + 2]
+    told = {text.split("=")[0] for text in answers}
+    for step in session.assessment.steps:
+        if step.kind in ("check", "indication") and step.id not in told:
+            observable = session.circuit.observables[step.id]
+            likely = session.assessment.outlook.chances(observable).argmax()
+            answers.append(f"{step.id}={observable.outcomes[likely]}")
+    return answers[:RUNS]
+
+
+def test_one_finding_added_to_ten(capsys: pytest.CaptureFixture[str]) -> None:
+    circuit, before = load_circuit(PUMP_WEAR.circuit), findings_of(PUMP_WEAR)[:TEN]
+    session = open_case(circuit)
+    for text in before:
+        find(session, text)
+    answers = next_answers(session)
+    assert len(answers) == RUNS
+    steps = [measured(circuit, before, answer) for answer in answers]
+    seconds = [step.seconds for step in steps]
+    counts = [len(step.session.assessment.posterior.weight) for step in steps]
+    checks = len(circuit.observables) - TEN - 1
+    with capsys.disabled():
+        print(f"\n\nOne finding added to ten, {circuit.id}, {len(circuit.modes)} modes,")
+        print(f"  {checks} checks valued, {min(counts)} to {max(counts)} hypotheses kept:")
+        print(f"  {milliseconds(seconds)} ({RUNS} different answers)")
+    assert statistics.median(seconds) <= STEP_SECONDS
+
+
+# -- side by side ------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Row:
+    """One size of the comparison; `found` is None when the library did not finish."""
+
+    library: str
+    subject: Subject
+    ours: float
+    found: dict[str, Any] | None
+    why: str
+
+    @property
+    def seconds(self) -> float:
+        return statistics.median(self.found["seconds"]) if self.found else math.nan
+
+    @property
+    def ratio(self) -> float | None:
+        """Times that diag is faster, at least; None when nothing can be said."""
+        if self.found:
+            return self.seconds / self.ours
+        return PATIENCE / self.ours if self.why == "time" else None
+
+    def __str__(self) -> str:
+        took = f"{self.seconds * 1e3:9.0f} ms" if self.found else f"no ({self.why})"
+        mark = "" if self.found else ">"
+        ratio = f"{mark}{self.ratio:.0f}x" if self.ratio else "-"
+        ours = f"{self.ours * 1e3:6.1f} ms"
+        return f"{self.library:8} {took:>14} {ours:>10} {ratio:>8}  {self.subject}"
+
+
+def compared(library: str, subject: Subject) -> Row:
+    """The library's step and ours on the same circuit, one after the other."""
+    *before, added = subject.texts
+    runs = [measured(subject.circuit, before, added) for _ in range(15)]
+    ours = statistics.median(run.seconds for run in runs)
+    found, why = rival(library, subject)
+    row = Row(library, subject, ours, found, why)
+    if found:
+        check_agreement(row, runs[0].session)
+    return row
+
+
+def rival(library: str, subject: Subject) -> tuple[dict[str, Any] | None, str]:
+    """The library's answer from a process of its own, or why there is none."""
+    scope = "part" if subject.part else "whole"
+    module = "tests.benchmarks.rivals"
+    command = [sys.executable, "-m", module, library, str(subject.count), scope]
+    try:
+        done = subprocess.run(command, cwd=ROOT, capture_output=True, text=True, timeout=PATIENCE)
+    except subprocess.TimeoutExpired:
+        return None, "time"
+    if done.returncode == 0:
+        found: dict[str, Any] = json.loads(done.stdout.splitlines()[-1])
+        return found, ""
+    out_of_memory = ("bad_alloc", "MemoryError", "Unable to allocate", "OutOfMemory")
+    assert any(word in done.stderr for word in out_of_memory), done.stderr[-2000:]
+    return None, "memory"
+
+
+def check_agreement(row: Row, session: Session) -> None:
+    """Both say the same, as near as the stated coverage promises."""
+    assert row.found is not None
+    assessment = session.assessment
+    missing = 1.0 - assessment.posterior.coverage.value
+    for ref, value in row.found["modes"].items():
+        assert assessment.marginals[ref] == pytest.approx(value, abs=missing + 1e-9), ref
+    for name, chances in row.found["chances"].items():
+        observable = session.circuit.observables[name]
+        ours = dict(
+            zip(observable.outcomes, assessment.outlook.chances(observable), strict=True)
+        )
+        # Predictions are made from the weightiest hypotheses: another 1e-4 may be left out.
+        assert ours == pytest.approx(chances, abs=missing + 2e-4), name
+
+
+def climb(library: str) -> Iterator[Row]:
+    """The whole circuit, then ever larger parts of it until the library gives up."""
+    yield compared(library, Subject(TEN + 1, part=False))
+    for count in LADDER[library]:
+        row = compared(library, Subject(count, part=True))
+        yield row
+        if row.found is None:
+            return
+
+
+@pytest.mark.parametrize("library", list(TIMES_FASTER))
+def test_against_general_purpose_libraries(
+    library: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with capsys.disabled():
+        print(f"\n\n{'library':8} {'one step':>14} {'diag':>10} {'ratio':>8}  circuit")
+        rows = []
+        for row in climb(library):
+            print(row, flush=True)
+            rows.append(row)
+    largest = [row for row in rows if row.found][-1]
+    assert largest.ratio is not None
+    assert largest.ratio >= TIMES_FASTER[library]
+
+
+# -- cold start and memory ---------------------------------------------------------------
+
+SPAWN = """
+import json, os, subprocess, sys, time
+start = time.perf_counter()
+child = subprocess.Popen(sys.argv[1:], stdout=subprocess.DEVNULL)
+_, status, usage = os.wait4(child.pid, 0)
+print(json.dumps([time.perf_counter() - start, usage.ru_maxrss / 1024, status]))
+"""
+"""Run by a small process: a child's peak begins with the memory of the one that spawned it."""
+
+
+def test_rank_cold(capsys: pytest.CaptureFixture[str]) -> None:
+    findings = findings_of(PUMP_WEAR)[:TEN]
+    command = [sys.executable, "-m", "diag", "rank", PUMP_WEAR.circuit]
+    command += [part for text in findings for part in ("--observe", text)]
+    runs = [spawned(command) for _ in range(5)]
+    seconds, peak = [run[0] for run in runs], max(run[1] for run in runs)
+    with capsys.disabled():
+        print(f"\n\n`diag rank` with {TEN} findings, whole process: {milliseconds(seconds)};")
+        print(f"  peak resident memory {peak:.0f} MB")
+    assert statistics.median(seconds) <= COLD_SECONDS
+    assert peak <= RESIDENT_MB
+
+
+def spawned(command: list[str]) -> tuple[float, float]:
+    """Seconds and peak resident megabytes of one process."""
+    runner = [sys.executable, "-c", SPAWN, *command]
+    done = subprocess.run(runner, cwd=ROOT, capture_output=True, text=True, check=True)
+    seconds, peak, status = json.loads(done.stdout)
+    assert status == 0, done.stderr
+    return seconds, peak
+
+
+# -- coverage ----------------------------------------------------------------------------
+
+
+@cache
+def replayed(case: Example) -> list[tuple[str, float, str]]:
+    """Per step of a case: what was added, the coverage after it, and how that is known."""
+    session = open_case(load_circuit(case.circuit))
+    found = []
+    steps = [*(("add", text) for text in case.complaint), *case.steps()]
+    for kind, what in steps:
+        if kind == "add":
+            find(session, what)
+        else:
+            session.add(Rectified(at=NOW, rectification=what))
+        coverage = session.assessment.posterior.coverage
+        found.append((what, coverage.value, coverage.method))
+    return found
+
+
+@pytest.mark.parametrize("case", EXAMPLES, ids=[e.name for e in EXAMPLES])
+def test_coverage_of_the_cases(case: Example, capsys: pytest.CaptureFixture[str]) -> None:
+    rows = replayed(case)
+    what, least, method = min(rows, key=lambda row: row[1])
+    _, last, last_method = rows[-1]
+    with capsys.disabled():
+        print(f"\n{case.name}: coverage {last:.7f} at the end ({last_method}), ", end="")
+        print(f"least of {len(rows)} steps {least:.7f} ({method}) after {what}")
+    assert last >= COVERED
+
+
+@pytest.mark.parametrize("case", EXAMPLES, ids=[e.name for e in EXAMPLES])
+def test_stated_coverage_is_true(case: Example, capsys: pytest.CaptureFixture[str]) -> None:
+    """Wherever the closed sum is affordable at all, no more is claimed than was enumerated."""
+    session, checked = open_case(load_circuit(case.circuit)), 0
+    for text in findings_of(case):
+        find(session, text)
+        posterior = session.assessment.posterior
+        views: dict[Any, list[Any]] = {}
+        for sight in posterior.sights:
+            views.setdefault((sight.node, sight.world), []).append((sight.digit, sight.table))
+        exact = log_evidence(posterior.frame, posterior.engine.odds, views, SUM_BUDGET)
+        if exact is None:
+            break
+        true, checked = math.exp(posterior.log_evidence - exact), checked + 1
+        stated = posterior.coverage
+        assert stated.value <= true + 1e-9, f"{text}: {stated} but {true:.9f}"
+    with capsys.disabled():
+        print(f"\n{case.name}: stated coverage true after each of the first {checked} findings")
+    assert checked >= 2

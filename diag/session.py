@@ -14,6 +14,7 @@ from typing import Any
 
 import numpy as np
 
+from diag.advice.reasons import Reason, reasons
 from diag.advice.rules import (
     Firing,
     Odds,
@@ -24,16 +25,18 @@ from diag.advice.rules import (
     fired,
     judge_findings,
     minutes_between,
+    recheck,
     with_rules,
 )
 from diag.advice.steps import NOTICE, NextStep, Place, meets, next_steps
 from diag.belief.conflict import conflict_bits
 from diag.belief.evidence import Finding, make_finding, parse_finding
+from diag.belief.explain import suspect
 from diag.belief.frame import Raised, World
 from diag.belief.hypotheses import Engine, Posterior
 from diag.belief.outlook import Outlook
 from diag.circuit.model import UNLISTED, Circuit
-from diag.errors import UnknownName, UsageError
+from diag.errors import InputError, UnknownName, UsageError
 from diag.record.events import (
     AnyEvent,
     Closed,
@@ -49,6 +52,8 @@ from diag.record.events import (
 )
 from diag.record.narrate import NOTHING, cause_title
 
+CONFLICT_BITS = 3.0
+"""Conflict from which a re-check is proposed. Judgement."""
 TOP = 5
 """Causes kept in a standing."""
 
@@ -377,6 +382,8 @@ class Assessment:
         view, recalled = rule_view(self.state), self._recalled
         free, held = with_rules(self._by_worth, self.firings, view, recalled)
         again = asked_again(self.firings, view, self.state.not_possible, recalled)
+        if self.doubtful is not None:
+            again += recheck(view, self.doubtful[0], self.state.not_possible, recalled)
         first, more = with_rules(again, self.firings, view, recalled)
         named = {step.id for step in first}
         rest = [step for step in free if step.id not in named]
@@ -395,6 +402,21 @@ class Assessment:
     def held(self) -> list[NextStep]:
         """Steps that a rule holds now, with the reasons."""
         return self._ruled[1]
+
+    @cached_property
+    def doubtful(self) -> tuple[Finding, float] | None:
+        """In a conflict: the finding that fits least, and the conflict left without it."""
+        return suspect(self.posterior) if self.conflict_bits > CONFLICT_BITS else None
+
+    def reasons(self, ref: str) -> list[Reason]:
+        """Findings for and against one cause, in decibans and in words.
+
+        Raises:
+            UnknownName: no such cause.
+        """
+        if ref not in self.posterior.frame.index:
+            raise UnknownName("cause", ref, self.posterior.frame.refs)
+        return reasons(self.posterior.engine, self.posterior.findings, ref)
 
     @property
     def sound(self) -> float:
@@ -472,6 +494,7 @@ class Session:
         Raises:
             UsageError, UnknownName: the event does not fit; the case is unchanged.
             Contradiction: no cause allows the findings together; the case is unchanged.
+            InputError: the event could not be read back from a log; the case is unchanged.
             JournalError: the event is part of the case in memory but could not be saved.
         """
         before = self.assessment.standing if self.state.opened else None
@@ -485,9 +508,14 @@ class Session:
         return full
 
     def _keep(self, event: AnyEvent) -> None:
-        self.state = advance(self.state, event)
-        if self._save is not None:
-            self._save(event)
+        before, self.state = self.state, advance(self.state, event)
+        try:
+            if self._save is not None:
+                self._save(event)
+        except InputError:
+            # Refused as it stands, not for want of space: then it is no part of the case.
+            self.state = before
+            raise
 
     def _record_rules(self, cause: AnyEvent, known: set[tuple[str, ...]]) -> None:
         """Writes down every rule that fires since `cause` and did not before."""

@@ -331,3 +331,22 @@ def asked_again(
             step = check_step(circuit, observable, 0.0, view.place, recalled)
             found.append(replace(step, note=rule.text))
     return list({step.id: step for step in found}.values())
+
+
+def recheck(
+    view: View, finding: Finding, not_possible: Container[str], recalled: bool
+) -> list[NextStep]:
+    """The cheapest other look at what a doubtful finding looked at, or the same look again."""
+    circuit, own = view.circuit, finding.observable
+    others = [
+        observable
+        for observable in circuit.observables.values()
+        if observable.node == own.node
+        and observable.id not in not_possible
+        and (observable.id == own.id or observable.id not in view.sightings)
+    ]
+    steps = [check_step(circuit, other, 0.0, view.place, recalled) for other in others]
+    # The same look errs the same way when its error is persistent: another one is better.
+    steps.sort(key=lambda s: (s.id == own.id, s.expected_minutes, s.id))
+    note = f"The findings do not hang together; {finding} fits least. Look again."
+    return [replace(steps[0], note=note)] if steps else []

@@ -137,9 +137,7 @@ def test_worked_on_components_are_suspected_more(turboprop: Circuit, now: dateti
     chances = []
     for worked_on in ((), ("relief_valve",)):
         session = Session(turboprop)
-        session.add(
-            Opened(at=now, circuit="c", version="1", content_hash="0", worked_on=worked_on)
-        )
+        session.add(Opened(at=now, circuit="c", version="1", content_hash="0", worked_on=worked_on))
         session.find(now, "oil_pressure", "hot_idle", "50psi")
         chances.append(session.assessment.posterior.probability("relief_valve.spring_weak"))
     assert chances[1] > 3 * chances[0]
@@ -176,9 +174,7 @@ def test_events_that_do_not_fit_leave_the_case_alone(
     assert case.state is state
 
 
-def test_a_verification_from_before_the_repair_does_not_count(
-    case: Session, now: datetime
-) -> None:
+def test_a_verification_from_before_the_repair_does_not_count(case: Session, now: datetime) -> None:
     case.find(now, "oil_pressure", "hot_idle", "52psi")
     case.add(Rectified(at=now, rectification="pressure_pump_replace"))
     with pytest.raises(UsageError, match="before the last rectification"):

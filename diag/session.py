@@ -382,9 +382,10 @@ class Assessment:
         view, recalled = rule_view(self.state), self._recalled
         free, held = with_rules(self._by_worth, self.firings, view, recalled)
         again = asked_again(self.firings, view, self.state.not_possible, recalled)
-        if self.doubtful is not None:
-            again += recheck(view, self.doubtful[0], self.state.not_possible, recalled)
         first, more = with_rules(again, self.firings, view, recalled)
+        if self.doubtful is not None:
+            looks = recheck(view, self.doubtful[0], self.state.not_possible, recalled)
+            first += with_rules(looks, self.firings, view, recalled)[0][:1]
         named = {step.id for step in first}
         rest = [step for step in free if step.id not in named]
         alarm = [f.rule.text for f in self.firings if f.rule.kind == "escalate"]

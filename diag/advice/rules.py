@@ -336,7 +336,7 @@ def asked_again(
 def recheck(
     view: View, finding: Finding, not_possible: Container[str], recalled: bool
 ) -> list[NextStep]:
-    """The cheapest other look at what a doubtful finding looked at, or the same look again."""
+    """Other looks at what a doubtful finding looked at, cheapest first, then the same look."""
     circuit, own = view.circuit, finding.observable
     others = [
         observable
@@ -349,4 +349,4 @@ def recheck(
     # The same look errs the same way when its error is persistent: another one is better.
     steps.sort(key=lambda s: (s.id == own.id, s.expected_minutes, s.id))
     note = f"The findings do not hang together; {finding} fits least. Look again."
-    return [replace(steps[0], note=note)] if steps else []
+    return [replace(step, note=note) for step in steps]

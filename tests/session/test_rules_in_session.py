@@ -109,7 +109,7 @@ def test_conflict_proposes_the_cheapest_other_look(turboprop: Circuit, now: date
     for name, value in [
         ("oil_pressure", "78psi"),
         ("low_pressure_warning", "off"),
-        ("direct_gauge", "20psi"),
+        ("direct_gauge", "50psi"),
     ]:
         session.find(now, name, "hot_idle", value)
     assert session.assessment.conflict_bits > 3.0

@@ -283,7 +283,7 @@ def rule_view(state: CaseState) -> View:
         now=state.events[-1].at if state.events else datetime.min.replace(tzinfo=UTC),
         place=state.place,
         worked_on=frozenset(head.worked_on if head else ()),
-        both_engines=head.both_engines if head else False,
+        both_engines=bool(head and head.both_engines),
     )
 
 

@@ -6,7 +6,10 @@ import math
 
 from diag.belief.evidence import Finding
 from diag.belief.exact import log_evidence
-from diag.belief.hypotheses import EXACT_BUDGET, Engine, Posterior
+from diag.belief.hypotheses import Engine, Posterior
+
+CHEAP = 50_000
+"""Numbers in a closed sum that cost less than weighing hypotheses."""
 
 
 def conflict_bits(posterior: Posterior) -> float:
@@ -22,8 +25,13 @@ def conflict_bits(posterior: Posterior) -> float:
 
 
 def alone_log_evidence(engine: Engine, finding: Finding) -> float:
-    """log P(one finding), exactly where the closed sum is affordable."""
-    (sight,) = engine.sights([finding])
-    view = {(sight.node, sight.world): [(sight.digit, sight.table)]}
-    exact = log_evidence(engine.frame, engine.odds, view, EXACT_BUDGET)
-    return engine.posterior([finding]).log_evidence if exact is None else exact
+    """log P(one finding), exactly where the closed sum is cheap; kept by the engine."""
+    key = (finding.key, finding.value, finding.trust, finding.world)
+    if key not in engine.alone:
+        (sight,) = engine.sights([finding])
+        view = {(sight.node, sight.world): [(sight.digit, sight.table)]}
+        exact = log_evidence(engine.frame, engine.odds, view, CHEAP)
+        if exact is None:
+            exact = engine.posterior([finding]).log_evidence
+        engine.alone[key] = exact
+    return engine.alone[key]

@@ -95,6 +95,15 @@ class Frame:
         return block
 
     @cached_property
+    def touched(self) -> dict[str, NDArray[np.bool_]]:
+        """Per condition: (modes,) whether the mode moves it."""
+        acts = self.cumulative[:-1] < 1.0
+        return {
+            name: np.asarray(acts[:, side.down.start : side.up.stop].any(axis=1))
+            for name, side in self.sides.items()
+        }
+
+    @cached_property
     def promotions(self) -> tuple[Array, Indices]:
         """Log factors on odds, (promoters, modes + 1), and the promoters' mode indices."""
         found: dict[int, Array] = {}

@@ -106,6 +106,8 @@ class Engine:
         self.circuit = circuit
         self.frame = Frame(circuit)
         self.odds = self.frame.odds(worked_on, raised) if odds is None else odds
+        self.alone: dict[tuple[object, ...], float] = {}
+        """log P(finding) of single findings, as they were asked for."""
 
     @cached_property
     def normaliser(self) -> Array:

@@ -66,16 +66,41 @@ class Outlook:
     def states(self, node: str) -> Array:
         """(hypotheses, states) chances of the node's states, given the findings too."""
         if node not in self._states:
-            side = self.frame.sides[node]
-            cumulative = self._columns
-            chances = state_chances(
-                cumulative[:, side.down],
-                cumulative[:, side.up],
-                side.normal,
-                _background(self.frame, self.table, node, self._aside),
-            )
-            self._states[node] = self._seen(node, chances)
+            self._states[node] = self._seen(node, self._before[node])
         return self._states[node]
+
+    @cached_property
+    def _before(self) -> dict[str, Array]:
+        """(hypotheses, states) of all nodes before the findings; nodes of one shape at once."""
+        shapes: dict[tuple[int, int], list[str]] = {}
+        for name, side in self.frame.sides.items():
+            downs = side.down.stop - side.down.start
+            shapes.setdefault((downs, side.states - 1 - downs), []).append(name)
+        found: dict[str, Array] = {}
+        for (downs, ups), names in shapes.items():
+            starts = np.array([self.frame.sides[name].down.start for name in names])
+            columns = starts[:, None] + np.arange(downs + ups)
+            cumulative = self._columns[:, columns].transpose(1, 0, 2)
+            aside = np.array([self._background(name) for name in names])[:, None]
+            down, up = cumulative[..., :downs], cumulative[..., downs:]
+            found |= zip(names, state_chances(down, up, downs, aside), strict=True)
+        return found
+
+    def _background(self, node: str) -> Array:
+        """Expected product of cumulative chances of the components that take no part."""
+        side, touched = self.frame.sides[node], self.frame.touched[node]
+        downs = side.down.stop - side.down.start
+        block = self.table[:, side.down.start : side.up.stop]
+        total = np.ones((downs + 1, side.states - downs))
+        for modes, prior in self._aside:
+            if not touched[modes].any():
+                continue
+            rows = block[modes]
+            down = np.hstack([rows[:, :downs], np.ones((len(modes), 1))])
+            up = np.hstack([rows[:, downs:], np.ones((len(modes), 1))])
+            joint = down[:, :, None] * up[:, None, :]
+            total *= 1.0 - prior.sum() + np.tensordot(prior, joint, axes=1)
+        return total
 
     def _seen(self, node: str, chances: Array) -> Array:
         seen = False
@@ -151,22 +176,3 @@ def mean_plogp(p: Array, weight: Array) -> Array:
     """Weighted mean of p · log2 p over the first axis."""
     found: Array = weight @ plogp(p)
     return found
-
-
-def _background(
-    frame: Frame, table: Array, node: str, aside: list[tuple[Indices, Array]]
-) -> Array | None:
-    """Expected product of cumulative chances of the components that take no part."""
-    side = frame.sides[node]
-    downs = side.down.stop - side.down.start
-    block = table[:, side.down.start : side.up.stop]
-    total = np.ones((downs + 1, side.states - downs))
-    for modes, prior in aside:
-        rows = block[modes]
-        if (rows == 1.0).all():
-            continue
-        down = np.hstack([rows[:, :downs], np.ones((len(modes), 1))])
-        up = np.hstack([rows[:, downs:], np.ones((len(modes), 1))])
-        joint = down[:, :, None] * up[:, None, :]
-        total *= 1.0 - prior.sum() + np.tensordot(prior, joint, axes=1)
-    return None if (total == 1.0).all() else total

@@ -51,8 +51,8 @@ class Opened(Event):
     """The crew's own words."""
     worked_on: tuple[str, ...] = ()
     """Components touched at the last maintenance."""
-    both_engines: bool = False
-    """The other engine shows the same after the same visit."""
+    both_engines: bool | None = None
+    """Whether the other engine shows the same after the same visit; None where nobody said."""
     flights: Annotated[int, Field(ge=0)] | None = None
     """Flights that the engine had made when the case was opened, where somebody counts them."""
 

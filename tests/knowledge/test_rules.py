@@ -190,7 +190,7 @@ def view_of(circuit: Circuit, case: str) -> View:
             version="1",
             content_hash="0",
             worked_on=worked,
-            both_engines="both" in tokens,
+            both_engines="both" in tokens or None,
         )
     ]
     at, chances, conflict = START, {}, 0.0

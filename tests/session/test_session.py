@@ -233,7 +233,7 @@ ACTIONS = st.sampled_from(
 )
 
 
-@settings(max_examples=25, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(max_examples=12, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(actions=st.lists(ACTIONS, max_size=7))
 def test_replaying_the_events_gives_the_same_case(
     turboprop: Circuit, now: datetime, actions: list[object]

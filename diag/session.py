@@ -388,10 +388,13 @@ class Assessment:
             first += with_rules(looks, self.firings, view, recalled)[0][:1]
         named = {step.id for step in first}
         rest = [step for step in free if step.id not in named]
-        alarm = [f.rule.text for f in self.firings if f.rule.kind == "escalate"]
-        if alarm:
-            end = replace(rest[-1], note=" ".join(alarm))
-            rest = [end, *(step for step in rest if step.kind != "escalate")]
+        alarms = [f.rule for f in self.firings if f.rule.kind == "escalate"]
+        if alarms:
+            end = replace(rest[-1], note=" ".join(rule.text for rule in alarms))
+            rest = [step for step in rest if step.kind != "escalate"]
+            # A conflict is looked into first; what is dangerous or hopeless is handed over first.
+            urgent = any(rule.when.subject != "conflict_above" for rule in alarms)
+            first = [end, *first] if urgent else [*first, end]
         return [*first, *rest], [*more, *held]
 
     @property

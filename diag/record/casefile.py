@@ -8,10 +8,8 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
-import numpy as np
-
-from diag.belief.evidence import make_finding, state_likelihood
-from diag.circuit.model import Circuit, Observable
+from diag.belief.evidence import make_finding, outcome_of
+from diag.circuit.model import Circuit
 from diag.errors import DiagError, InputError
 from diag.record.events import (
     Acknowledged,
@@ -23,6 +21,7 @@ from diag.record.events import (
     NotPossible,
     Opened,
     Rectified,
+    RuleFired,
     Standing,
     StateChanged,
     Withdrawn,
@@ -80,6 +79,10 @@ class CaseFile:
     @property
     def not_possible(self) -> tuple[NotPossible, ...]:
         return tuple(event for event in self.live if isinstance(event, NotPossible))
+
+    @property
+    def fired(self) -> tuple[RuleFired, ...]:
+        return tuple(event for event in self.live if isinstance(event, RuleFired))
 
     @property
     def closed(self) -> Closed | None:
@@ -172,54 +175,37 @@ def key_of(found: Found) -> str:
     return f"{found.name}@{found.point}" if found.point else found.name
 
 
-def outcome_of(observable: Observable, value: str) -> str:
-    """The outcome word that a value amounts to; a number goes to its likeliest band.
-
-    Raises:
-        UsageError: the observation cannot have this value.
-    """
-    finding = make_finding(observable, value)
-    if finding.value in observable.outcomes:
-        return finding.value
-    state = int(np.argmax(state_likelihood(finding)))
-    return observable.outcomes[observable.reports[state]]
-
-
 def reads_normal(circuit: Circuit, found: Found) -> bool:
     """Whether a finding is the unremarkable one; False where the circuit cannot tell."""
     try:
         observable = circuit.observable(found.name, found.point)
-        return outcome_of(observable, found.value) == observable.normal
+        return outcome_of(make_finding(observable, found.value)) == observable.normal
     except DiagError:
         return False
 
 
 def unproven(circuit: Circuit | None, case: CaseFile) -> tuple[Rectified, ...]:
-    """Rectifications after which nothing shows that they worked.
+    """Rectifications after which nothing shows that they worked."""
+    return tuple(event for event in case.rectified if proof_of(circuit, case, event) is None)
 
-    The proof is the finding that the rectification names, unremarkable and taken after it;
-    without the circuit, the verification that the closing names.
+
+def proof_of(circuit: Circuit | None, case: CaseFile, event: Rectified) -> Found | None:
+    """The finding that shows that a rectification worked, or None.
+
+    It is the one that the rectification names, unremarkable and taken after it; where the
+    circuit does not know the rectification, the verification that the closing names.
     """
-    return tuple(
-        event for n, event in enumerate(case.rectified, start=1) if not _proven(circuit, case, event, n)
-    )
-
-
-def _proven(circuit: Circuit | None, case: CaseFile, event: Rectified, count: int) -> bool:
     remedy = circuit.remedies.get(event.rectification) if circuit else None
     if circuit is None or remedy is None:
-        return case.proof is not None
-    return any(
-        key_of(found) == remedy.record.verify
-        and case.after[found.number] >= count
+        return case.proof
+    fits = (
+        found
+        for found in reversed(case.standing_findings)
+        if key_of(found) == remedy.record.verify
+        and found.number > event.number
         and reads_normal(circuit, found)
-        for found in case.standing_findings
     )
-
-
-def verified(circuit: Circuit, case: CaseFile) -> bool:
-    """Whether the closing names a finding that shows the fix: fresh, and unremarkable."""
-    return case.proof is not None and reads_normal(circuit, case.proof)
+    return next(fits, None)
 
 
 def why_not_confirmed(circuit: Circuit, case: CaseFile) -> str:
@@ -231,16 +217,14 @@ def why_not_confirmed(circuit: Circuit, case: CaseFile) -> str:
     closed = case.closed
     if closed is None:
         return "not closed"
-    if closed.outcome != "cause_confirmed" or not closed.causes:
-        return "no cause confirmed"
-    if not all(ref in circuit.modes for ref in closed.causes):
-        return "a confirmed cause that this circuit does not list"
-    if case.proof is None:
-        return "not verified"
-    if not reads_normal(circuit, case.proof):
-        return "the verification reads abnormal"
     remedies = (circuit.remedies.get(event.rectification) for event in case.rectified)
     restored = {ref for remedy in remedies if remedy for ref in remedy.restores}
-    if not set(closed.causes) <= restored:
-        return "a confirmed cause was not rectified"
-    return ""
+    causes = set(closed.causes)
+    reasons = {
+        "no cause confirmed": closed.outcome == "cause_confirmed" and causes,
+        "a confirmed cause that this circuit does not list": causes <= set(circuit.modes),
+        "not verified": case.proof is not None,
+        "the verification reads abnormal": case.proof and reads_normal(circuit, case.proof),
+        "a confirmed cause was not rectified": causes <= restored,
+    }
+    return next((reason for reason, holds in reasons.items() if not holds), "")

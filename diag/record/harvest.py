@@ -12,7 +12,7 @@ What counts, and why:
   indication is. Findings asked for later count in full: which one was asked for depended on
   what the log records, so those not asked for are missing at random.
 - The verification was repeated until it came out well, so it proves the fix and nothing else.
-- A doubted finding counts for nothing here.
+- A finding that is doubted, or that a rule sets aside, counts for nothing here.
 """
 
 from __future__ import annotations
@@ -65,7 +65,7 @@ class Case(NamedTuple):
     causes: tuple[str, ...]
     arisen: tuple[str, ...]
     """Causes that count for their rate: not promoted by another cause of the case, and not on
-    a component that had just been worked on."""
+    a component that was more likely than usual, having been worked on."""
     complained: tuple[str, ...]
     """Conditions that the report speaks of."""
     scenes: tuple[Scene, ...]
@@ -132,7 +132,8 @@ def gather(
     harvest = Harvest(known=set(counted))
     names = [os.fspath(log) for log in logs]
     chunks = [names[at : at + CHUNK] for at in range(0, len(names), CHUNK)]
-    read = Parallel(n_jobs=jobs, return_as="generator")(
+    # Starting processes takes longer than reading one chunk.
+    read = Parallel(n_jobs=jobs if len(chunks) > 1 else 1, return_as="generator")(
         delayed(read_cases)(chunk, circuit) for chunk in chunks
     )
     for chunk, cases in zip(chunks, read, strict=True):
@@ -157,6 +158,7 @@ class _Reader:
     def __init__(self, circuit: Circuit) -> None:
         self.circuit = circuit
         self.modes = circuit.modes
+        self.rules = {rule.id: rule for rule in circuit.rules}
         self._understood: dict[tuple[str, str], str | tuple[float, ...]] = {}
 
     def read(self, log: str) -> Case | LeftOut:
@@ -182,20 +184,42 @@ class _Reader:
         return Case(
             identity,
             truth,
-            tuple(ref for ref in truth if self._arose(ref, truth, case.head.worked_on)),
+            tuple(ref for ref in truth if self._arose(ref, truth, case)),
             tuple(sorted(nodes)),
             tuple(self._scenes(case, truth)),
         )
 
-    def _arose(self, ref: str, truth: Sequence[str], worked_on: Sequence[str]) -> bool:
+    def _arose(self, ref: str, truth: Sequence[str], case: CaseFile) -> bool:
         promoted = any(self.modes[o].record.promotes.get(ref, 1.0) > 1.0 for o in truth)
-        return not promoted and self.modes[ref].component not in worked_on
+        raised = {
+            name
+            for event in case.fired
+            if (rule := self.rules.get(event.rule))
+            for name in rule.raises
+        }
+        return not promoted and self.modes[ref].component not in raised.union(case.head.worked_on)
+
+    def _mute(self, case: CaseFile) -> set[int]:
+        """Findings that were doubted, set aside by a rule, or chosen for how they came out."""
+        mute = set(case.trust)
+        if case.proof is not None:
+            mute |= _takes(case, key_of(case.proof), len(case.rectified))
+        for event in case.fired:
+            rule = self.rules.get(event.rule)
+            if rule and rule.finding:
+                done = sum(r.number < event.number for r in case.rectified)
+                takes = _takes(case, rule.finding, done)
+                mute |= {number for number in takes if number < event.number}
+        return mute
 
     def _scenes(self, case: CaseFile, truth: Sequence[str]) -> Iterator[Scene]:
         spans = {ref: self._span(case, ref) for ref in truth}
         seen: dict[tuple[str, tuple[str, ...]], dict[str, tuple[Found, Observable]]] = {}
         present: dict[int, tuple[str, ...]] = {}
-        for found in filter(_telling(case), case.found):
+        mute = self._mute(case)
+        for found in case.found:
+            if found.number in mute:
+                continue
             done = case.after[found.number]
             if any(first <= done < last for first, last in spans.values()):
                 continue
@@ -252,15 +276,9 @@ class _Reader:
         return self._understood[key]
 
 
-def _telling(case: CaseFile) -> Callable[[Found], bool]:
-    """Whether a finding was neither doubted nor chosen for how it came out."""
-    proof, done = case.proof, len(case.rectified)
-
-    def tells(found: Found) -> bool:
-        proves = proof is not None and key_of(found) == key_of(proof)
-        return found.number not in case.trust and not (proves and case.after[found.number] == done)
-
-    return tells
+def _takes(case: CaseFile, key: str, done: int) -> set[int]:
+    """Findings of one observation after so many rectifications."""
+    return {f.number for f in case.found if key_of(f) == key and case.after[f.number] == done}
 
 
 def _coarse(numbers: Sequence[float]) -> tuple[float, ...]:

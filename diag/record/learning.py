@@ -20,18 +20,20 @@ The pseudo-counts say how much the circuit's own number is worth; they are judge
 from __future__ import annotations
 
 from collections import defaultdict
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 
 from diag.belief.evidence import outcome_table
-from diag.belief.frame import Array, Frame, signal_matrix, state_chances
-from diag.circuit.model import UNLISTED, Circuit
+from diag.belief.frame import Array, Frame, Indices, signal_matrix, state_chances
+from diag.circuit.model import Circuit
 from diag.errors import UnknownName, UsageError
 from diag.record.harvest import Harvest, LeftOut, Look, Scene
 
+LOOKS = 20.0
+"""Looks that a chance of the circuit counts as much as. Judgement."""
 ENOUGH = 1.0
 """Looks below which a chance is not written: it would still be the circuit's own number."""
 MOST_ITERATIONS = 500
@@ -45,7 +47,7 @@ class Weights:
 
     events: float = 1.0
     """A rate counts as much as so many events seen."""
-    looks: float = 20.0
+    looks: float = LOOKS
     """A chance counts as much as so many looks."""
 
 
@@ -98,9 +100,10 @@ class Number:
         gamma = self.item == "per_million_hours"
         family = "Gamma" if gamma else "Beta"
         unit = " h" if gamma else ""
-        prior, posterior = (f"{family}({a:.6g}, {b:.6g}{unit})" for a, b in (self.prior, self.posterior))
+        pairs = (self.prior, self.posterior)
+        told = " -> ".join(f"{family}({a:.6g}, {b:.6g}{unit})" for a, b in pairs)
         return (
-            f"{self.item}: {self.counted:.4g} in {self.out_of:.6g}{unit}; {prior} -> {posterior}; "
+            f"{self.item}: {self.counted:.4g} in {self.out_of:.6g}{unit}; {told}; "
             f"{self.before:.4g} -> {self.after:.4g}"
         )
 
@@ -145,7 +148,7 @@ def learn(
     em = Em(circuit, harvest.scenes, harvest.complained, weights.looks)
     iterations = em.run()
     numbers = [*rates, *em.numbers()]
-    numbers.sort(key=lambda number: (-round(number.moved, 9), number.kind, number.name, number.item))
+    numbers.sort(key=lambda n: (-round(n.moved, 9), n.kind, n.name, n.item))
     return Learned(
         circuit.id,
         harvest.cases,
@@ -167,7 +170,7 @@ def complaint_chance(circuit: Circuit) -> dict[str, float]:
     One look at each indication at each of its points, false alarms included.
     """
     frame = Frame(circuit)
-    by_node: dict[str, list[tuple[Array, Array]]] = defaultdict(list)
+    by_node: dict[str, list[tuple[Indices, Array]]] = defaultdict(list)
     for observable in circuit.observables.values():
         if observable.record.kind == "indication":
             passed = frame.through(observable)
@@ -268,7 +271,7 @@ class Em:
         circuit: Circuit,
         scenes: Mapping[Scene, int],
         complained: Iterable[str] = (),
-        weight: float = Weights.looks,
+        weight: float = LOOKS,
         start: Mapping[str, tuple[float, float]] | None = None,
     ) -> None:
         self.circuit, self.weight = circuit, weight
@@ -327,13 +330,17 @@ class Em:
         for name, (hits, abnormal, alarms, normal) in self.check_tallies.items():
             detects, false_alarm = self.given[1][name]
             new = (
-                float(_revised(_pair(detects), np.array([abnormal - hits, hits]), self.weight)[1]),
-                float(_revised(_pair(false_alarm), np.array([normal - alarms, alarms]), self.weight)[1]),
+                self._chance_anew(detects, hits, abnormal),
+                self._chance_anew(false_alarm, alarms, normal),
             )
             old = self.checks[name]
             largest = max(largest, abs(new[0] - old[0]), abs(new[1] - old[1]))
             self.checks[name] = new
         return largest
+
+    def _chance_anew(self, given: float, count: float, total: float) -> float:
+        pair, tally = np.array([1.0 - given, given]), np.array([total - count, count])
+        return float(_revised(pair, tally, self.weight)[1])
 
     def numbers(self) -> list[Number]:
         """The chances that enough looks speak of."""
@@ -365,13 +372,9 @@ class Em:
         self, kind: str, name: str, item: str, before: float, after: float, x: float, n: float
     ) -> Number:
         a, b = self.weight * before, self.weight * (1.0 - before)
-        posterior = (float(a + x), float(b + n - x))
-        values = (float(v) for v in (before, after, x, n))
-        return Number(kind, name, item, *values, (float(a), float(b)), posterior)
-
-
-def _pair(chance: float) -> Array:
-    return np.array([1.0 - chance, chance])
+        prior, posterior = (float(a), float(b)), (float(a + x), float(b + n - x))
+        before, after, x, n = float(before), float(after), float(x), float(n)
+        return Number(kind, name, item, before, after, x, n, prior, posterior)
 
 
 def _revised(given: Array, tally: Array, weight: float) -> Array:

@@ -25,11 +25,12 @@ from diag.record.events import (
 
 NOTHING = "nothing_found"
 """How a standing names the case in which no cause is present."""
-_OUTCOMES = {
+OUTCOMES = {
     "cause_confirmed": "cause confirmed",
     "no_fault_found": "no fault found",
     "handed_to_engineering": "handed to engineering",
 }
+"""How a case may end, in words."""
 
 
 def cause_title(circuit: Circuit | None, ref: str) -> str:
@@ -93,7 +94,7 @@ def summary(events: Sequence[AnyEvent]) -> Summary:
     standing = next((e.after for e in reversed(events) if e.after and e.after.causes), None)
     top = standing.causes[0] if standing else ("", 0.0)
     if closed:
-        state = f"closed, {_OUTCOMES[closed.outcome]}"
+        state = f"closed, {OUTCOMES[closed.outcome]}"
     else:
         state = f"handed over to {last.to}" if isinstance(last, HandedOver) else "open"
     opened = head.at.isoformat(sep=" ", timespec="minutes")
@@ -173,7 +174,7 @@ def _closed(circuit: Circuit | None, event: Closed) -> str:
         if event.verification is not None
         else f"not verified: {event.not_verified_because}"
     )
-    return f"closed, {_OUTCOMES[event.outcome]}{_because(causes)}; {proof}"
+    return f"closed, {OUTCOMES[event.outcome]}{_because(causes)}; {proof}"
 
 
 _LINES: Mapping[type, Callable[[Circuit | None, Any], str]] = {

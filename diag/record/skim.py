@@ -28,6 +28,7 @@ _KINDS: dict[str, type[Event]] = {
     for kind in Event.__subclasses__()
     if kind.__module__ == ev.__name__
 }
+_TUPLES = {"worked_on", "overlays", "causes", "opened", "closed", "because"}
 _OWN = re.compile(rb'"hash":"([0-9a-f]{64})",')
 _BEFORE = re.compile(rb'"hash_before":"([0-9a-f]{64})",')
 
@@ -90,9 +91,9 @@ def _made(data: dict[str, Any], number: int) -> AnyEvent:
     data["at"] = datetime.fromisoformat(data["at"])
     for name in ("before", "after"):
         if name in data:
-            data[name] = Standing.model_construct(**data[name])
-    for name in ("worked_on", "overlays", "causes", "opened", "closed"):
-        if name in data:
-            data[name] = tuple(data[name])
+            causes = tuple(map(tuple, data[name].get("causes", ())))
+            data[name] = Standing.model_construct(**{**data[name], "causes": causes})
+    for name in _TUPLES & data.keys():
+        data[name] = tuple(data[name])
     made: Any = kind.model_construct(None, **data)
     return made  # type: ignore[no-any-return]

@@ -25,7 +25,6 @@ from diag.belief.evidence import (
     MISREAD,
     Finding,
     band_likelihood,
-    in_unit,
     make_finding,
     number_of,
     outcome_table,
@@ -36,6 +35,7 @@ from diag.belief.hypotheses import Engine
 from diag.circuit.loading import load_circuit
 from diag.circuit.model import Circuit
 from diag.circuit.records import Scale
+from diag.circuit.units import in_unit
 from diag.errors import Exit, UnknownName, UsageError
 from tests.support import J, circuit, mode
 
@@ -51,7 +51,9 @@ SCALES = {
     "temperature": Scale(
         unit="degC", range=(-60, 250), tolerance=3, limits={"any": (65, 115)}, basis=J
     ),
-    "quantity": Scale(unit="litre", range=(0, 12), tolerance=0.4, limits={"any": (7, 8.6)}, basis=J),
+    "quantity": Scale(
+        unit="litre", range=(0, 12), tolerance=0.4, limits={"any": (7, 8.6)}, basis=J
+    ),
 }
 STATES = {
     "pressure": ("very_low", "low", "normal", "high"),
@@ -260,7 +262,9 @@ def test_unknown_names_tell_the_nearest() -> None:
 
 def test_a_word_only_reading_takes_no_number() -> None:
     plain = replace(made().observables["pressure"], record=_plain_record())
-    with pytest.raises(UsageError, match=r"cannot be '52psi'; it takes very_low, low, normal, high$"):
+    with pytest.raises(
+        UsageError, match=r"cannot be '52psi'; it takes very_low, low, normal, high$"
+    ):
         make_finding(plain, "52psi")
 
 
@@ -340,7 +344,9 @@ def test_densities_equal_quadrature(name: str) -> None:
 
 
 @settings(max_examples=100, deadline=None)
-@given(st.floats(0.0, 100.0), st.floats(0.05, 40.0), st.lists(st.floats(1, 99), min_size=1, max_size=4))
+@given(
+    st.floats(0.0, 100.0), st.floats(0.05, 40.0), st.lists(st.floats(1, 99), min_size=1, max_size=4)
+)
 def test_densities_equal_quadrature_on_any_scale(
     number: float, tolerance: float, cuts: list[float]
 ) -> None:
@@ -410,7 +416,9 @@ def effect(value: str, trust: float) -> float:
 
 def two_sided(detects: float, alarm: float) -> Any:
     nodes: dict[str, Any] = {"n": (("ok", "bad"), "ok", {"bad": 0.01}, {"a.x": {"bad": 0.9}})}
-    return circuit([mode("a", "x", 0.1)], nodes, {"look": ("n", detects, alarm)}).observables["look"]
+    return circuit([mode("a", "x", 0.1)], nodes, {"look": ("n", detects, alarm)}).observables[
+        "look"
+    ]
 
 
 @pytest.mark.parametrize("value", ["ok", "bad"])
@@ -473,7 +481,10 @@ def texts(draw: st.DrawFn) -> str:
         space = draw(st.sampled_from(["", " ", "   "]))
         value = draw(st.sampled_from([value, f"{number!r}{space}{scale.unit}"]))
     if draw(st.booleans()):
-        name, value = name.replace("_", "-"), value.replace("_", "-").upper() if "_" in value else value
+        name, value = (
+            name.replace("_", "-"),
+            value.replace("_", "-").upper() if "_" in value else value,
+        )
     return f"{name}={value}"
 
 

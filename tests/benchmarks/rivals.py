@@ -40,7 +40,7 @@ def main(library: str, count: int, scope: str) -> None:
     resource.setrlimit(resource.RLIMIT_AS, (MEMORY, MEMORY))
     subject = Subject(count, scope == "part")
     step = {"pgmpy": with_pgmpy, "pyagrum": with_pyagrum}[library](subject)
-    seconds = []
+    seconds: list[float] = []
     while not seconds or (len(seconds) < REPEATS and sum(seconds) < ENOUGH):
         start = time.perf_counter()
         posterior, chances, value = step()
@@ -77,8 +77,9 @@ def components(tables: Sequence[Table]) -> list[str]:
 
 
 def with_pyagrum(subject: Subject) -> Callable[[], Answer]:
-    import pyagrum as gum
+    import pyagrum
 
+    gum: Any = pyagrum
     tables = circuit_tables(Engine(subject.circuit))
     network = _pyagrum_network(gum, tables)
     inference = gum.LazyPropagation(network)

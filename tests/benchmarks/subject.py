@@ -45,6 +45,14 @@ def open_case(circuit: Circuit) -> Session:
     return session
 
 
+def open_with(circuit: Circuit, findings: Sequence[str]) -> Session:
+    """A session in which these findings were taken already, in their order."""
+    session = open_case(circuit)
+    for text in findings:
+        find(session, text)
+    return session
+
+
 def find(session: Session, text: str) -> None:
     """Adds the finding written as `NAME@POINT=VALUE`."""
     finding = parse_finding(session.circuit, text)
@@ -111,4 +119,5 @@ def part_of(circuit: Circuit, findings: Sequence[Finding]) -> Circuit:
             if v.node in nodes and kept.issuperset(v.through)
         },
         remedies={},
+        rules=(),
     )

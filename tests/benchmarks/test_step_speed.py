@@ -9,24 +9,33 @@ from __future__ import annotations
 
 import json
 import math
+import os
 import statistics
 import subprocess
 import sys
 import time
 from collections.abc import Iterator
 from dataclasses import dataclass
-from functools import cache
 from pathlib import Path
 from typing import Any
 
 import pytest
 
+from diag.belief.evidence import parse_finding
 from diag.belief.exact import log_evidence
+from diag.belief.hypotheses import Engine
 from diag.circuit.loading import load_circuit
-from diag.circuit.model import Circuit
 from diag.record.events import Rectified
-from diag.session import Session
-from tests.benchmarks.subject import NOW, PUMP_WEAR, Subject, find, findings_of, open_case
+from diag.session import Assessment, Session
+from tests.benchmarks.subject import (
+    NOW,
+    PUMP_WEAR,
+    Subject,
+    find,
+    findings_of,
+    open_case,
+    open_with,
+)
 from tests.examples import EXAMPLES, Example
 
 ROOT = Path(__file__).resolve().parents[2]
@@ -36,12 +45,14 @@ STEP_SECONDS = 0.060
 TIMES_FASTER = {"pgmpy": 100.0, "pyagrum": 10.0}
 LADDER = {"pgmpy": range(2, TEN + 2), "pyagrum": range(4, TEN + 2)}
 """Findings in the cut-down circuit, from a size that is no trouble upwards."""
+FEW = {"pgmpy": 1, "pyagrum": 2}
+"""Findings with which the library finishes on the whole circuit, every check valued."""
 PATIENCE = 60.0
 """Seconds that a library gets for one step, its start and its network included."""
 COLD_SECONDS = 1.5
 RESIDENT_MB = 250.0
 COVERED = 0.9999
-SUM_BUDGET = 300_000_000
+SUM_BUDGET = 100_000_000
 """Numbers in the closed sum that a benchmark can afford."""
 
 
@@ -50,23 +61,22 @@ SUM_BUDGET = 300_000_000
 
 @dataclass(frozen=True)
 class Step:
-    """One measured step: seconds, and where the case stands after it."""
+    """One finding added: seconds by the clock and of the processor, and the case after it."""
 
     seconds: float
+    busy: float
     session: Session
 
 
-def measured(circuit: Circuit, before: list[str], added: str) -> Step:
+def measured(before: Session, added: str) -> Step:
     """Adds one finding; the posteriors and the value of every check are there when it ends."""
-    session = open_case(circuit)
-    for text in before:
-        find(session, text)
+    session = Session.replay(before.circuit, before.state.events)
     assert session.assessment.steps  # as it stood on the screen when the answer came
-    start = time.perf_counter()
+    start, busy = time.perf_counter(), time.process_time()
     find(session, added)
     assert session.assessment.marginals
     assert session.assessment.steps
-    return Step(time.perf_counter() - start, session)
+    return Step(time.perf_counter() - start, time.process_time() - busy, session)
 
 
 def milliseconds(values: list[float]) -> str:
@@ -74,8 +84,13 @@ def milliseconds(values: list[float]) -> str:
     return f"median {middle * 1e3:.1f} ms, min {low * 1e3:.1f}, max {high * 1e3:.1f}"
 
 
+def load() -> str:
+    """How busy the machine is, since other work slows every figure down."""
+    return f"load {os.getloadavg()[0]:.1f} on {os.cpu_count()} cores"
+
+
 def next_answers(session: Session) -> list[str]:
-    """The case's own next findings, then the checks proposed, each with a likely answer."""
+    """The case's own next findings, then the checks proposed, each with its likeliest answer."""
     answers = findings_of(PUMP_WEAR)[TEN : TEN + 2]
     told = {text.split("=")[0] for text in answers}
     for step in session.assessment.steps:
@@ -87,20 +102,19 @@ def next_answers(session: Session) -> list[str]:
 
 
 def test_one_finding_added_to_ten(capsys: pytest.CaptureFixture[str]) -> None:
-    circuit, before = load_circuit(PUMP_WEAR.circuit), findings_of(PUMP_WEAR)[:TEN]
-    session = open_case(circuit)
-    for text in before:
-        find(session, text)
-    answers = next_answers(session)
+    circuit = load_circuit(PUMP_WEAR.circuit)
+    before = open_with(circuit, findings_of(PUMP_WEAR)[:TEN])
+    answers = next_answers(before)
     assert len(answers) == RUNS
-    steps = [measured(circuit, before, answer) for answer in answers]
-    seconds = [step.seconds for step in steps]
-    counts = [len(step.session.assessment.posterior.weight) for step in steps]
+    runs = [measured(before, answer) for answer in answers]
+    seconds = [run.seconds for run in runs]
+    counts = [len(run.session.assessment.posterior.weight) for run in runs]
     checks = len(circuit.observables) - TEN - 1
     with capsys.disabled():
         print(f"\n\nOne finding added to ten, {circuit.id}, {len(circuit.modes)} modes,")
         print(f"  {checks} checks valued, {min(counts)} to {max(counts)} hypotheses kept:")
-        print(f"  {milliseconds(seconds)} ({RUNS} different answers)")
+        print(f"  {milliseconds(seconds)} ({RUNS} different answers, {load()});")
+        print(f"  of the processor: {milliseconds([run.busy for run in runs])}")
     assert statistics.median(seconds) <= STEP_SECONDS
 
 
@@ -123,28 +137,29 @@ class Row:
 
     @property
     def ratio(self) -> float | None:
-        """Times that diag is faster, at least; None when nothing can be said."""
+        """Times that diag is faster; at least, when patience ran out; None without a time."""
         if self.found:
             return self.seconds / self.ours
         return PATIENCE / self.ours if self.why == "time" else None
 
     def __str__(self) -> str:
-        took = f"{self.seconds * 1e3:9.0f} ms" if self.found else f"no ({self.why})"
+        took = f"{self.seconds * 1e3:.0f} ms" if self.found else f"no ({self.why})"
         mark = "" if self.found else ">"
         ratio = f"{mark}{self.ratio:.0f}x" if self.ratio else "-"
-        ours = f"{self.ours * 1e3:6.1f} ms"
-        return f"{self.library:8} {took:>14} {ours:>10} {ratio:>8}  {self.subject}"
+        ours = f"{self.ours * 1e3:.1f} ms"
+        return f"{self.library:8} {took:>12} {ours:>9} {ratio:>8}  {self.subject}"
 
 
 def compared(library: str, subject: Subject) -> Row:
     """The library's step and ours on the same circuit, one after the other."""
     *before, added = subject.texts
-    runs = [measured(subject.circuit, before, added) for _ in range(15)]
+    session = open_with(subject.circuit, before)
+    runs = [measured(session, added) for _ in range(15)]
     ours = statistics.median(run.seconds for run in runs)
     found, why = rival(library, subject)
     row = Row(library, subject, ours, found, why)
     if found:
-        check_agreement(row, runs[0].session)
+        check_agreement(found, runs[0].session.assessment)
     return row
 
 
@@ -165,25 +180,24 @@ def rival(library: str, subject: Subject) -> tuple[dict[str, Any] | None, str]:
     return None, "memory"
 
 
-def check_agreement(row: Row, session: Session) -> None:
+def check_agreement(found: dict[str, Any], ours: Assessment) -> None:
     """Both say the same, as near as the stated coverage promises."""
-    assert row.found is not None
-    assessment = session.assessment
-    missing = 1.0 - assessment.posterior.coverage.value
-    for ref, value in row.found["modes"].items():
-        assert assessment.marginals[ref] == pytest.approx(value, abs=missing + 1e-9), ref
-    for name, chances in row.found["chances"].items():
-        observable = session.circuit.observables[name]
-        ours = dict(
-            zip(observable.outcomes, assessment.outlook.chances(observable), strict=True)
-        )
-        # Predictions are made from the weightiest hypotheses: another 1e-4 may be left out.
-        assert ours == pytest.approx(chances, abs=missing + 2e-4), name
+    posterior, outlook = ours.posterior, ours.outlook
+    missing = 1.0 - posterior.coverage.value + 1e-9
+    for ref, value in found["modes"].items():
+        assert ours.marginals[ref] == pytest.approx(value, abs=missing), ref
+    # Predictions are made from the weightiest hypotheses only.
+    missing += 1.0 - float(posterior.weight[: len(outlook.weight)].sum())
+    for name, chances in found["chances"].items():
+        observable = ours.circuit.observables[name]
+        predicted = dict(zip(observable.outcomes, outlook.chances(observable), strict=True))
+        assert predicted == pytest.approx(chances, abs=missing), name
 
 
 def climb(library: str) -> Iterator[Row]:
     """The whole circuit, then ever larger parts of it until the library gives up."""
-    yield compared(library, Subject(TEN + 1, part=False))
+    for count in (TEN + 1, FEW[library]):
+        yield compared(library, Subject(count, part=False))
     for count in LADDER[library]:
         row = compared(library, Subject(count, part=True))
         yield row
@@ -195,15 +209,17 @@ def climb(library: str) -> Iterator[Row]:
 def test_against_general_purpose_libraries(
     library: str, capsys: pytest.CaptureFixture[str]
 ) -> None:
+    """The bar is held against the largest part on which the library finishes or uses up its
+    minute; on parts so small that it has little to do, the ratio is smaller and only printed."""
+    rows = []
     with capsys.disabled():
-        print(f"\n\n{'library':8} {'one step':>14} {'diag':>10} {'ratio':>8}  circuit")
-        rows = []
+        print(f"\n\n{'library':8} {'one step':>12} {'diag':>9} {'ratio':>8}  circuit ({load()})")
         for row in climb(library):
             print(row, flush=True)
             rows.append(row)
-    largest = [row for row in rows if row.found][-1]
-    assert largest.ratio is not None
-    assert largest.ratio >= TIMES_FASTER[library]
+    assert any(row.found for row in rows)
+    ratio = [row.ratio for row in rows if row.ratio][-1]
+    assert ratio >= TIMES_FASTER[library]
 
 
 # -- cold start and memory ---------------------------------------------------------------
@@ -218,23 +234,29 @@ print(json.dumps([time.perf_counter() - start, usage.ru_maxrss / 1024, status]))
 """Run by a small process: a child's peak begins with the memory of the one that spawned it."""
 
 
-def test_rank_cold(capsys: pytest.CaptureFixture[str]) -> None:
+def test_rank_cold(capsys: pytest.CaptureFixture[str], tmp_path: Path) -> None:
+    """Bytecode is there, as on any machine where diag ran before; nothing else is."""
     findings = findings_of(PUMP_WEAR)[:TEN]
     command = [sys.executable, "-m", "diag", "rank", PUMP_WEAR.circuit]
     command += [part for text in findings for part in ("--observe", text)]
-    runs = [spawned(command) for _ in range(5)]
+    kept = {k: v for k, v in os.environ.items() if k != "PYTHONDONTWRITEBYTECODE"}
+    settings = {**kept, "PYTHONPYCACHEPREFIX": str(tmp_path)}
+    spawned(command, settings)
+    runs = [spawned(command, settings) for _ in range(5)]
     seconds, peak = [run[0] for run in runs], max(run[1] for run in runs)
     with capsys.disabled():
-        print(f"\n\n`diag rank` with {TEN} findings, whole process: {milliseconds(seconds)};")
-        print(f"  peak resident memory {peak:.0f} MB")
+        print(f"\n\n`diag rank` with {TEN} findings, whole process: {milliseconds(seconds)}")
+        print(f"  peak resident memory {peak:.0f} MB ({load()})")
     assert statistics.median(seconds) <= COLD_SECONDS
     assert peak <= RESIDENT_MB
 
 
-def spawned(command: list[str]) -> tuple[float, float]:
+def spawned(command: list[str], settings: dict[str, str]) -> tuple[float, float]:
     """Seconds and peak resident megabytes of one process."""
     runner = [sys.executable, "-c", SPAWN, *command]
-    done = subprocess.run(runner, cwd=ROOT, capture_output=True, text=True, check=True)
+    done = subprocess.run(
+        runner, cwd=ROOT, env=settings, capture_output=True, text=True, check=True
+    )
     seconds, peak, status = json.loads(done.stdout)
     assert status == 0, done.stderr
     return seconds, peak
@@ -243,7 +265,6 @@ def spawned(command: list[str]) -> tuple[float, float]:
 # -- coverage ----------------------------------------------------------------------------
 
 
-@cache
 def replayed(case: Example) -> list[tuple[str, float, str]]:
     """Per step of a case: what was added, the coverage after it, and how that is known."""
     session = open_case(load_circuit(case.circuit))
@@ -273,14 +294,15 @@ def test_coverage_of_the_cases(case: Example, capsys: pytest.CaptureFixture[str]
 @pytest.mark.parametrize("case", EXAMPLES, ids=[e.name for e in EXAMPLES])
 def test_stated_coverage_is_true(case: Example, capsys: pytest.CaptureFixture[str]) -> None:
     """Wherever the closed sum is affordable at all, no more is claimed than was enumerated."""
-    session, checked = open_case(load_circuit(case.circuit)), 0
+    circuit, findings, checked = load_circuit(case.circuit), [], 0
+    engine = Engine(circuit)
     for text in findings_of(case):
-        find(session, text)
-        posterior = session.assessment.posterior
+        findings.append(parse_finding(circuit, text))
+        posterior = engine.posterior(findings)
         views: dict[Any, list[Any]] = {}
         for sight in posterior.sights:
             views.setdefault((sight.node, sight.world), []).append((sight.digit, sight.table))
-        exact = log_evidence(posterior.frame, posterior.engine.odds, views, SUM_BUDGET)
+        exact = log_evidence(engine.frame, engine.odds, views, SUM_BUDGET)
         if exact is None:
             break
         true, checked = math.exp(posterior.log_evidence - exact), checked + 1

@@ -73,13 +73,7 @@ class Fleet:
         self.others = [
             o for o in observables if o.record.kind == "check" and o.id not in self.always
         ]
-        self.by_ref = {
-            ref: [n for n in self.circuit.nodes.values() if ref in n.effects]
-            for ref in self.circuit.modes
-        }
-        self.remedy = {
-            ref: r.id for r in self.circuit.remedies.values() for ref in r.restores
-        }
+        self.remedy = {ref: r.id for r in self.circuit.remedies.values() for ref in r.restores}
 
     def faults(self, hours: float) -> list[str]:
         """Faults that arise in so many hours, in random order."""
@@ -123,7 +117,10 @@ class Fleet:
             if mode.component in observable.through and signal is not None:
                 top, draw = len(node.record.states) - 1, self.rng.random()
                 shown = {"lowest": 0, "normal": node.normal, "highest": top}
-                ways = [(signal.shift_down, max(state - 1, 0)), (signal.shift_up, min(state + 1, top))]
+                ways = [
+                    (signal.shift_down, max(state - 1, 0)),
+                    (signal.shift_up, min(state + 1, top)),
+                ]
                 ways += [(p, shown[word]) for word, p in signal.shows.items()]
                 for p, other in ways:
                     if 0.0 <= draw < p:

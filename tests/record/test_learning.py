@@ -8,7 +8,7 @@ import itertools
 import json
 import shutil
 from collections import Counter
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Sequence
 from functools import cache
 from pathlib import Path
 from typing import Any
@@ -25,7 +25,7 @@ from diag.belief.hypotheses import Engine
 from diag.circuit.loading import knowledge_root, load_circuit
 from diag.circuit.model import Circuit
 from diag.errors import InputError, UnknownName, UsageError
-from diag.record.harvest import Harvest, LeftOut, Look, Scene, gather
+from diag.record.harvest import CHUNK, Harvest, LeftOut, Look, Scene, gather
 from diag.record.learning import (
     Em,
     Fleet,
@@ -204,7 +204,9 @@ def test_a_rate_is_the_mean_of_its_posterior(x: int, hours: float) -> None:
     top = 60.0 * max(number.after, number.before) * 1e-6
     mean = mean_under(weight, top, number.after * 1e-6)
     assert number.after == pytest.approx(mean * 1e6, rel=1e-6)
-    assert stats.gamma(number.posterior[0], scale=1 / number.posterior[1]).mean() == pytest.approx(mean)
+    assert stats.gamma(number.posterior[0], scale=1 / number.posterior[1]).mean() == pytest.approx(
+        mean
+    )
 
 
 def test_a_chance_per_event_is_the_mean_of_its_posterior() -> None:
@@ -264,7 +266,7 @@ def test_the_chance_of_a_complaint_is_what_a_simulated_fleet_shows() -> None:
 
 CHECK = "oil_spectrum"
 LINK = ("pressure_filter.loaded", "filter_debris")
-HOURS = 2.5e6
+HOURS = 2e6
 
 
 def fleet(asked: int = 4, seed: int = 1) -> simulated.Fleet:
@@ -377,7 +379,16 @@ def test_a_learned_ranking_beats_the_shipped_one(
                 findings = [
                     make_finding(circuit.observables[o.id], value) for o, value in [*report, *asked]
                 ]
-                row.append(float(np.log(max(engine.posterior(findings, max_faults=2, beam=50).probability(ref), 1e-6))))
+                row.append(
+                    float(
+                        np.log(
+                            max(
+                                engine.posterior(findings, max_faults=2, beam=50).probability(ref),
+                                1e-6,
+                            )
+                        )
+                    )
+                )
             scores.append(row)
     shipped, after = np.mean(scores, axis=0)
     assert after > shipped + 0.2
@@ -393,7 +404,8 @@ def test_the_overlay_says_what_moved_and_loads(learned: Learned, tmp_path: Path)
     path.write_text(overlay_text(learned, circuit, "learned"))
     laid = load_circuit(NAME, [path])
     assert laid.overlays == ("learned",)
-    assert [n.moved for n in learned.numbers] == sorted((n.moved for n in learned.numbers))[::-1]
+    moves = [round(n.moved, 9) for n in learned.numbers]
+    assert moves == sorted(moves, reverse=True)
     for number in learned.numbers:
         if number.kind == "rate":
             rate = laid.modes[number.name].rate
@@ -487,10 +499,14 @@ CLOSED: list[tuple[str, Callable[[list[dict[str, Any]]], object], str]] = [
     ("psi", lambda x: x[-2].update(value="45psi"), "verification reads abnormal"),
     (
         "swap",
-        lambda x: only(x, "rectified").update(rectification="relief_valve_replace"),
+        lambda x: only(x, "rectified").update(rectification="relief_valve_set_pressure"),
         "was not rectified",
     ),
-    ("more", lambda x: only(x, "closed")["causes"].append("relief_valve.sticky"), "was not rectified"),
+    (
+        "more",
+        lambda x: only(x, "closed")["causes"].append("relief_valve.sticky"),
+        "was not rectified",
+    ),
     ("odd", lambda x: only(x, "closed").update(causes=["unlisted.present"]), "does not list"),
     ("other", lambda x: x[0].update(circuit="full_flow_turbofan"), "another circuit"),
     ("word", lambda x: x[1].update(name="ouija_board"), "unknown finding"),
@@ -516,7 +532,7 @@ def test_replaced_is_not_was_faulty(
 def test_a_good_part_replaced_on_the_way_counts_for_nothing(tmp_path: Path) -> None:
     def swapped_first(lines: list[dict[str, Any]]) -> None:
         at = lines.index(only(lines, "rectified"))
-        lines.insert(at, {**lines[at], "rectification": "relief_valve_replace"})
+        lines.insert(at, {**lines[at], "rectification": "relief_valve_set_pressure"})
         lines[-1]["verification"] += 1
 
     harvest = gather([case(tmp_path, "swap", swapped_first)], loaded(NAME))
@@ -603,7 +619,9 @@ def test_findings_of_the_report_and_the_proof_do_not_count(tmp_path: Path) -> No
     assert counting == {"filter_element"}
     assert any(not look.counts for look in looks)
     proof = loaded(NAME).remedies["pressure_pump_replace"].record.verify
-    assert all(s.causes for s in scenes_of(path).values() if s.node == proof.replace("oil", "gallery"))
+    assert all(
+        s.causes for s in scenes_of(path).values() if s.node == proof.replace("oil", "gallery")
+    )
 
 
 def test_the_stretch_between_two_attempts_is_passed_over(tmp_path: Path) -> None:
@@ -641,16 +659,20 @@ def test_a_reading_is_evidence_of_the_condition(tmp_path: Path) -> None:
 # Many logs
 
 
-def test_several_processes_find_the_same(harvest: Harvest, logs: list[Path]) -> None:
+MANY = 280
+"""More logs than one task reads."""
+
+
+def test_several_processes_find_the_same(logs: list[Path]) -> None:
     told: list[int] = []
-    again = gather(logs, loaded(NAME), jobs=2, progress=told.append)
-    assert again == harvest
-    assert sum(told) == len(logs)
+    again = gather(logs[:MANY], loaded(NAME), jobs=2, progress=told.append)
+    assert again == gather(logs[:MANY], loaded(NAME))
+    assert told == [CHUNK, MANY - CHUNK]
 
 
 if importlib.util.find_spec("distributed"):
 
-    def test_a_cluster_finds_the_same(harvest: Harvest, logs: list[Path]) -> None:
+    def test_a_cluster_finds_the_same(logs: list[Path]) -> None:
         from distributed import Client, LocalCluster
 
         with (
@@ -658,4 +680,5 @@ if importlib.util.find_spec("distributed"):
             Client(cluster),
             joblib.parallel_config(backend="dask"),
         ):
-            assert gather(logs, loaded(NAME), jobs=-1) == harvest
+            spread = gather(logs[:MANY], loaded(NAME), jobs=-1)
+        assert spread == gather(logs[:MANY], loaded(NAME))

@@ -11,15 +11,16 @@ import sys
 from collections.abc import Callable, Iterable, Sequence
 from contextlib import suppress
 from datetime import datetime
+from functools import cache
 from pathlib import Path
 from typing import Annotated, Any
 
 import typer
 
-from diag import cli_record
+from diag import cli_physics, cli_record
 from diag.advice.steps import NOTICE
 from diag.belief.evidence import parse_finding
-from diag.circuit.loading import circuit_names, load_circuit
+from diag.circuit.loading import circuit_folder, circuit_names, load_circuit
 from diag.circuit.model import Circuit
 from diag.errors import DiagError, Exit, InputError, UnknownName, UsageError
 from diag.plain import Identity, PlainSession, plain_id
@@ -60,6 +61,7 @@ circuit_app = typer.Typer(
 app.add_typer(log_app, name="log")
 app.add_typer(circuit_app, name="circuit")
 cli_record.register(log_app, app)
+cli_physics.register(circuit_app)
 
 MAX_NAME = 200
 """Characters in a name given on the command line."""
@@ -159,8 +161,14 @@ def run(arguments: Sequence[str]) -> int:
     return code
 
 
+@cache
+def commands() -> Any:
+    """The commands as the command-line library has them, with their options and help."""
+    return typer.main.get_command(app)
+
+
 def _command(arguments: Sequence[str]) -> None:
-    command = typer.main.get_command(app)
+    command = commands()
     if "_DIAG_COMPLETE" in os.environ:
         command.main(args=list(arguments), prog_name="diag")  # the shell asks for completions
     # Not `main`: it has exit codes of its own for a closed pipe and for Ctrl-C.
@@ -509,9 +517,11 @@ def circuit_review(circuit: CircuitName, overlay: Overlays = None, as_json: AsJs
     Example:
       diag circuit review my_circuit/
     """
+    from diag.physics.loading import physics_problems
+
     try:
-        load_circuit(circuit, overlay or ())
-        problems: list[str] = []
+        known = load_circuit(circuit, overlay or ())
+        problems = [str(p) for p in physics_problems(known, circuit_folder(circuit))]
     except InputError as error:
         problems = [str(problem) for problem in error.problems]
         _narrate(str(error).splitlines()[0])

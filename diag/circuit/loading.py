@@ -1,7 +1,7 @@
 """From a folder of YAML to a circuit: reads all, reports every fault at once.
 
 A circuit folder holds `circuit.yaml`, `conditions.yaml` and any of `links*.yaml`,
-`indications.yaml`, `checks.yaml`. Kinds and the shared vocabulary lie in the
+`indications.yaml`, `checks.yaml`, `physics.yaml`. Kinds and the shared vocabulary lie in the
 knowledge root, beside or above it.
 """
 
@@ -47,6 +47,8 @@ from diag.circuit.rules import RulesFile
 from diag.errors import InputError, Origin, Problem, UnknownName
 
 M = TypeVar("M", bound=BaseModel)
+COMPANIONS = ("physics.yaml",)
+"""Files that may lie beside a circuit for the rooms above; they count in its content hash."""
 
 
 def knowledge_root() -> Traversable:
@@ -88,6 +90,12 @@ def load_circuit(
         count = f"{len(faults)} problem{'s' if len(faults) != 1 else ''}"
         raise InputError(f"circuit {brief(name)} cannot be used: {count}", faults)
     return circuit
+
+
+def circuit_folder(name: str, root: Traversable | None = None) -> Traversable:
+    """The folder of a circuit, by id or by path; raises UnknownName with the nearest."""
+    shared = root or knowledge_root()
+    return _circuit_folder(name, shared, circuit_names(shared))
 
 
 def _distinct(problems: Iterable[Problem]) -> list[Problem]:
@@ -150,6 +158,9 @@ class _Reader:
             overlays=[o for path in overlays if (o := self.overlay(path, head))],
             kinds=self.kinds(document, folder),
         )
+        for name in COMPANIONS:
+            if _present(folder / name):
+                self.document(folder / name)
         if head is None or conditions is None:
             return None
         if head.id != folder.name and folder.name in self.names:

@@ -7,15 +7,17 @@ looks across records.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from typing import Annotated, Literal
 
 from pydantic import Field, model_validator
 
-from diag.circuit.records import Based, Basis, Id, Record, Text
-from diag.errors import Problem
+from diag.circuit.records import Based, Basis, Id, ModeRef, Record, Text
+from diag.errors import DiagError, Problem
 from diag.physics.elements import Arrangement
+from diag.physics.faults import DAY, FAULTS, Fault, severities
 from diag.physics.oil import Oil, OilError, fit_d341
+from diag.physics.spread import Ranges, Readout, Severity, Spread, ends
 
 Positive = Annotated[float, Field(gt=0)]
 Share = Annotated[float, Field(ge=0, le=1)]
@@ -294,6 +296,17 @@ class Physics(Record):
     air_cooler: AirCooler | None = None
     breather: Breather
     points: Annotated[tuple[Point, ...], Field(min_length=1)]
+    spread: Spread | None = None
+    severities: dict[ModeRef, Severity] = Field(default_factory=dict)
+    """Modes of the circuit to the faults of a calculation, when they are worth a complaint."""
+    conditions: dict[Id, Readout] = Field(default_factory=dict)
+    """Conditions of the circuit that the physics knows."""
+
+    @property
+    def missing(self) -> tuple[str, ...]:
+        """Optional elements that this circuit does not have."""
+        optional = ("relief", "boost", "fuel_cooler", "air_cooler")
+        return tuple(name for name in optional if getattr(self, name) is None)
 
 
 def problems(physics: Physics) -> list[Problem]:
@@ -369,6 +382,32 @@ def _cannot_carry(physics: Physics) -> Iterator[Problem]:
         yield Problem(tank.where, "tank.filled_l", message, f"{tank.filled_l:g}")
 
 
+def _ranges_taken(physics: Physics) -> Iterator[Problem]:
+    """Every range names something that the calculation takes, and stays within its bounds."""
+    feeds = [feed.id for feed in physics.feeds]
+    chambers = [chamber.id for chamber in physics.chambers]
+    tables: list[tuple[str, Ranges, Mapping[str, Fault]]] = [
+        (f"severities.{ref}", ranges, FAULTS) for ref, ranges in physics.severities.items()
+    ]
+    if physics.spread:
+        tables.append(("spread.build", physics.spread.build, FAULTS))
+        tables.append(("spread.day", physics.spread.day, DAY))
+    for path, ranges, known in tables:
+        try:
+            severities(ends(ranges), feeds, chambers, known, physics.missing)
+        except DiagError as error:
+            yield Problem(ranges.where, path, str(error))
+
+
+def _readouts_placed(physics: Physics) -> Iterator[Problem]:
+    known = [point.id for point in physics.points]
+    for name, readout in physics.conditions.items():
+        for point in (*readout.at, *([readout.stopped_from] if readout.stopped_from else [])):
+            if point not in known:
+                path, accepted = f"conditions.{name}", ", ".join(known)
+                yield Problem(readout.where, path, "no such point", point, accepted)
+
+
 _CHECKS: tuple[Callable[[Physics], Iterator[Problem]], ...] = (
     _repeated,
     _unknown_chambers,
@@ -377,4 +416,6 @@ _CHECKS: tuple[Callable[[Physics], Iterator[Problem]], ...] = (
     _no_heat_path,
     _temperatures_covered,
     _cannot_carry,
+    _ranges_taken,
+    _readouts_placed,
 )

@@ -12,7 +12,6 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-import typer
 
 from diag import cli
 from diag.advice.steps import NOTICE
@@ -38,11 +37,11 @@ from tests.cli.running import (
     ROOT,
     Diag,
     acknowledged,
+    copied,
     environment,
     events,
     lines,
     loaded,
-    process,
 )
 
 # -- the ranking as JSON --------------------------------------------------------------------
@@ -173,7 +172,7 @@ def commands(command: Any, path: tuple[str, ...] = ()) -> Iterator[tuple[tuple[s
         yield from commands(inner, (*path, name))
 
 
-ALL = dict(commands(typer.main.get_command(cli.app)))
+ALL = dict(commands(cli.commands()))
 
 
 def test_the_commands_are_those_documented() -> None:
@@ -200,7 +199,7 @@ def test_help_names_every_option_and_gives_an_example(diag: Diag, path: tuple[st
 
 def parses(words: list[str]) -> bool:
     """Whether the command line library takes the words, without running the command."""
-    command = typer.main.get_command(cli.app)
+    command = cli.commands()
     while hasattr(command, "commands"):
         command, words = command.commands[words[0]], words[1:]
     command.make_context("diag", words)
@@ -242,7 +241,7 @@ def case(tmp_path_factory: pytest.TempPathFactory) -> tuple[str, Path]:
     folder = tmp_path_factory.mktemp("case")
     said = [line for typed in SAID.values() for line in typed]
     typed = lines(*COMPLAINT, "1 # TASK 79-0", "help", "?", "quite unknown", *said)
-    told = process(
+    told = copied(
         "isolate", PUMP, "--log", "case.jsonl", "--by", "A. Mechanic", typed=typed, cwd=folder
     )
     assert told.code == 0, told.out + told.err

@@ -1,0 +1,1 @@
+"""Troubleshooting as an abstract problem, its exact solution and a time-bounded search."""

@@ -9,7 +9,7 @@ its cause is likely enough.
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 
 from diag.belief.outlook import Outlook
@@ -86,7 +86,9 @@ def needs_of(observable: Observable, recalled: bool) -> Needs:
         recalled: an indication may still be taken from the report or the recorded data.
     """
     needs = observable.record.needs
-    if observable.record.kind == "indication" and not recalled and observable.point:
+    # Nobody recalls what the gauge showed on motoring: that is looked at.
+    looked_at = not recalled or observable.point == "motoring"
+    if observable.record.kind == "indication" and looked_at and observable.point:
         return needs.model_copy(update={"engine": _RUNNING.get(observable.point, "idle")})
     if needs.engine == "idle" and observable.point == "high_power":
         return needs.model_copy(update={"engine": "high_power"})
@@ -278,9 +280,14 @@ def next_steps(
     done, verify = set(done), list(verify)
     checks = checks_by_worth(circuit, outlook, place, done, recalled)
     remedies = remedies_by_chance(circuit, marginals, place, done)
-    proof = [step for name in verify for step in checks if step.id == name]
+    proof = [
+        replace(step, note="it shows whether the rectification worked")
+        for name in verify
+        for step in checks
+        if step.id == name
+    ]
     likely = [step for step in remedies if step.probability >= LIKELY_ENOUGH]
-    telling = [s for s in checks if s.information_bits >= WORTH_A_LOOK and s not in proof]
+    telling = [s for s in checks if s.information_bits >= WORTH_A_LOOK and s.id not in verify]
     rest = [s for s in remedies if s not in likely and s.probability >= 1.0 - LIKELY_ENOUGH]
     end = [closing(sound)] if sound >= LIKELY_ENOUGH else []
     return [*proof, *end, *likely, *telling, *rest, escalation(circuit)]

@@ -24,7 +24,7 @@ from diag.errors import UsageError
 
 Array = NDArray[np.float64]
 
-MISREAD = 0.005
+MISREAD = 0.001
 """P(a number read or written down has nothing to do with the instrument). Judgement."""
 
 LONGEST = 200

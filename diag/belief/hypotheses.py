@@ -359,7 +359,7 @@ class _Search:
 
 def _first_of_each(code: Indices) -> Indices:
     """Indices of one row per distinct code, in the order of the codes."""
-    bits = int(len(code)).bit_length()
+    bits = len(code).bit_length()
     if int(code.max(initial=0)).bit_length() + bits > 62:
         return np.unique(code, return_index=True)[1].astype(np.int64)
     # One sort of plain integers, code above and row below, is much faster than an argsort.

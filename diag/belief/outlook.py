@@ -12,7 +12,7 @@ from functools import cached_property
 import numpy as np
 
 from diag.belief.evidence import outcome_table
-from diag.belief.frame import Array, Frame, Indices, Transfer, World, state_chances, transfer
+from diag.belief.frame import Array, Indices, Transfer, World, state_chances, transfer
 from diag.belief.hypotheses import Posterior
 from diag.circuit.model import Observable
 

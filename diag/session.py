@@ -502,7 +502,7 @@ class Session:
             JournalError: the event is part of the case in memory but could not be saved.
         """
         before = self.assessment.standing if self.state.opened else None
-        known = {_firing_key(f) for f in self.assessment.firings} if self.state.opened else set()
+        known = self._known_firings()
         numbered = event.model_copy(update={"number": len(self.state.events), "before": before})
         after = self._assess(advance(self.state, numbered)).standing
         full = numbered.model_copy(update={"after": after})
@@ -520,6 +520,13 @@ class Session:
             # Refused as it stands, not for want of space: then it is no part of the case.
             self.state = before
             raise
+
+    def _known_firings(self) -> set[tuple[str, ...]]:
+        """Rules that fire already and stand in the log; one that could not be saved does not."""
+        if self.state.opened is None:
+            return set()
+        told = {(e.rule, *e.because) for e in self.state.events if isinstance(e, RuleFired)}
+        return told & {_firing_key(firing) for firing in self.assessment.firings}
 
     def _record_rules(self, cause: AnyEvent, known: set[tuple[str, ...]]) -> None:
         """Writes down every rule that fires since `cause` and did not before."""

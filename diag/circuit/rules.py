@@ -14,9 +14,7 @@ from pydantic import Field, StringConstraints, model_validator
 
 from diag.circuit.records import Based, Basis, Id, Minutes, Place, Record, Text
 
-RuleKind = Literal[
-    "hold", "caution", "normal_here", "void", "veto", "repeat", "escalate", "shared"
-]
+RuleKind = Literal["hold", "caution", "normal_here", "void", "veto", "repeat", "escalate", "shared"]
 ON_FINDINGS = ("normal_here", "void", "veto", "shared")
 """Kinds that decide what counts, before any probability is known."""
 Quantity = Annotated[str, StringConstraints(pattern=r"^[-+]?[0-9.]+ ?[A-Za-z/]+$", max_length=30)]

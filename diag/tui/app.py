@@ -10,7 +10,7 @@ from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, ClassVar
+from typing import TYPE_CHECKING, Any
 
 from textual import on, work
 from textual.app import App, SystemCommand
@@ -26,6 +26,7 @@ from diag.tui.themes import DEFAULTS, LAMP, NAMES, TERMINAL, THEMES
 
 if TYPE_CHECKING:
     from diag.circuit.model import Circuit
+    from diag.oilpath import Sheets
     from diag.tui.desk import Desk, Intake, Look
 
 
@@ -42,10 +43,7 @@ class DiagApp(App[None]):
 
     CSS_PATH = "diag.tcss"
     TITLE = "diag"
-    HORIZONTAL_BREAKPOINTS: ClassVar[list[tuple[int, str]] | None] = [
-        (0, "-narrow"),
-        (100, "-wide"),
-    ]
+    HORIZONTAL_BREAKPOINTS = [(0, "-narrow"), (100, "-wide")]  # noqa: RUF012
     BINDINGS = bindings(ANY)
     ENABLE_COMMAND_PALETTE = True
 
@@ -91,6 +89,7 @@ class DiagApp(App[None]):
         self.farewell = ""
         self._desk: Desk | None = None
         self._later: list[str] = []
+        self._sheets: dict[tuple[str, bool], Sheets] = {}
 
     def get_theme_variable_defaults(self) -> dict[str, str]:
         return DEFAULTS
@@ -112,7 +111,7 @@ class DiagApp(App[None]):
             self.push_screen(ComplaintScreen(self.request))
             self._read_circuits()
 
-    # -- what takes time -----------------------------------------------------------------------
+    # -- what takes time ------------------------------------------------------------------
 
     @work(thread=True, exclusive=True, group="read", exit_on_error=False)
     def _read_circuits(self) -> None:
@@ -253,7 +252,7 @@ class DiagApp(App[None]):
             error = f"NOT ON DISK, kept in memory: {error}" if taken else f"NOT TAKEN: {error}"
         self.post_message(self.Weighed(desk.look(count), error, taken))
 
-    # -- what comes back -------------------------------------------------------------------------
+    # -- what comes back ------------------------------------------------------------------
 
     @on(Weighed)
     def _weighed(self, event: Weighed) -> None:
@@ -309,7 +308,16 @@ class DiagApp(App[None]):
         """A word for when the change that is being made has been drawn; for workers."""
         self._later.append(text)
 
-    # -- other screens ---------------------------------------------------------------------------
+    def sheets_of(self, circuit: Circuit, heated: bool) -> Sheets:
+        """The layouts of a circuit, with or without heat; each is made once."""
+        from diag.oilpath import DRAWN, Sheets
+
+        key = (circuit.content_hash, heated)
+        if key not in self._sheets:
+            self._sheets[key] = Sheets(circuit, DRAWN | {"heat"} if heated else DRAWN)
+        return self._sheets[key]
+
+    # -- other screens --------------------------------------------------------------------
 
     def show_oil_path(self, look: Look, ref: str) -> None:
         """The oil path over the case, with the way of one cause."""
@@ -357,7 +365,7 @@ class DiagApp(App[None]):
             self.lost += self._desk.close()
             self._desk = None
 
-    # -- everywhere ------------------------------------------------------------------------------
+    # -- everywhere -----------------------------------------------------------------------
 
     def action_help(self) -> None:
         from diag.tui.dialogs.reading import Reader, help_lines

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from textual.theme import Theme
+from textual.theme import BUILTIN_THEMES, Theme
 
 LAMP, DAYLIGHT, TERMINAL = "lamp", "daylight", "terminal"
 NAMES = (LAMP, DAYLIGHT, TERMINAL)
@@ -53,8 +53,8 @@ THEMES = (
         background="ansi_default", surface="ansi_default", panel="ansi_default",
         boost="ansi_default", foreground="ansi_default",
         variables={
+            **BUILTIN_THEMES["ansi-dark"].variables,
             **_ANSI,
-            "text-muted": "ansi_default",
             "block-cursor-foreground": "ansi_default",
             "block-cursor-background": "ansi_default",
             "block-cursor-text-style": "bold reverse",

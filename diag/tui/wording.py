@@ -57,13 +57,12 @@ def since(then: datetime, now: datetime) -> str:
 
 
 def place_words(circuit: Circuit, engine: str, opened: frozenset[str], people_near: bool) -> str:
-    """Engine state, openings and people, in one line."""
-    words = [f"engine {engine.replace('_', ' ')}"]
+    """Who is near, the engine and what is open, in one line; what matters most stands first."""
+    words = ["PEOPLE NEAR"] if people_near else []
+    words.append(f"engine {engine.replace('_', ' ')}")
     if opened:
         titles = [circuit.openings[name].title.lower() for name in sorted(opened)]
         words.append(f"open: {', '.join(titles)}")
-    if people_near:
-        words.append("PEOPLE NEAR")
     return " · ".join(words)
 
 

@@ -31,12 +31,12 @@ COMPLAINT = ["Oil pressure low at hot idle", "oil_pressure@hot_idle=52psi", ""]
 """What is typed up to the first question; three events."""
 ACKNOWLEDGED = re.compile(r"^  recorded (\d+): ", re.MULTILINE)
 
-WITHOUT_BUFFER = ("PYTHONUNBUFFERED", "PYTHONDONTWRITEBYTECODE")
+NOT_INHERITED = ("PYTHONUNBUFFERED", "PYTHONDONTWRITEBYTECODE")
 
 
 def environment() -> dict[str, str]:
     """As a shell would give it, with this checkout in front."""
-    kept = {k: v for k, v in os.environ.items() if k not in WITHOUT_BUFFER}
+    kept = {k: v for k, v in os.environ.items() if k not in NOT_INHERITED}
     return {**kept, "PYTHONPATH": str(ROOT)}
 
 

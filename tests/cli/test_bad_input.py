@@ -203,7 +203,7 @@ def test_every_odd_answer_in_one_session(diag: Diag, tmp_path: Path) -> None:
     assert out.count("not taken: ") > len(ODD_ANSWERS) / 2
 
 
-@settings(max_examples=20, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@settings(max_examples=12, suppress_health_check=[HealthCheck.function_scoped_fixture])
 @given(
     answers=st.lists(
         st.one_of(st.sampled_from([*ODD_ANSWERS, "close", "1", "2"]), st.text(max_size=8)),

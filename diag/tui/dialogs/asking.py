@@ -39,6 +39,8 @@ class AskFinding(Slip[Given]):
         Binding("t", "task", "task", id="slip.task"),
     ]
 
+    AUTO_FOCUS = ""
+
     def __init__(self, observable: Observable) -> None:
         super().__init__()
         self.observable = observable
@@ -61,7 +63,6 @@ class AskFinding(Slip[Given]):
 
     def on_mount(self) -> None:
         super().on_mount()
-        self.set_focus(None)
         words = [spoken(self.observable, outcome) for outcome in self.observable.outcomes]
         self.query_one(Answers).show(words)
 
@@ -143,18 +144,12 @@ class AskState(Slip[Change]):
         lines = [Content.assemble(*states)]
         for letter, name in zip(self.letters, self.openings, strict=True):
             tick = "[open]" if name in self.opened else "[shut]"
-            title = self.circuit.openings[name].title
+            opening = self.circuit.openings[name]
+            inside = f"  inside {', '.join(opening.inside)}" if opening.inside else ""
             lines.append(
                 Content.assemble(
-                    (f" {letter} ", "reverse"),
-                    f" {tick} {title}",
-                    (
-                        f"  inside {', '.join(self.circuit.openings[name].inside)}"
-                        if self.circuit.openings[name].inside
-                        else "",
-                        "$faint",
-                    ),
-                )  # fmt: skip
+                    (f" {letter} ", "reverse"), f" {tick} {opening.title}", (inside, "$faint")
+                )
             )
         near = "[near]" if self.near else "[clear]"
         lines.append(Content.assemble((" p ", "reverse"), f" {near} people at the engine"))

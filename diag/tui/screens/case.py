@@ -90,20 +90,26 @@ class CaseScreen(Screen[None]):
                 yield Heading("COULD BE", id="causes-heading")
                 yield Causes(id="causes")
                 yield Heading("INSTEAD", id="rivals-heading")
-                yield Rivals(id="rivals", classes="hung")
+                yield Rivals(id="rivals")
+            with Vertical(id="far-column"):
                 yield Heading("SO FAR", last=True, id="far-heading")
                 yield SoFar(id="far")
         yield KeyStrip(CASE)
 
     def on_mount(self) -> None:
         self.query_one(Causes).add_class("hung")
+        self.query_one(Rivals).add_class("hung")
         self.set_interval(30, self._show_top)
         self.show(self.look)
 
     def on_resize(self, event: events.Resize) -> None:
-        self.call_after_refresh(self._draw)
+        self.call_after_refresh(self._resized)
 
-    # -- drawing ---------------------------------------------------------------------------------
+    def _resized(self) -> None:
+        self._draw()
+        self._foretell()
+
+    # -- drawing --------------------------------------------------------------------------
 
     @property
     def step(self) -> NextStep:
@@ -139,7 +145,7 @@ class CaseScreen(Screen[None]):
 
     def _draw(self) -> None:
         wide = self.app.size.width >= 100
-        self.query_one(Causes).set_most(10 if wide else self._room())
+        self.query_one(Causes).set_room(self._room(wide), tall=wide and self.app.size.height >= 30)
         self._show_top()
         self._show_step(wide)
         self.query_one(Causes).show(self.look.causes)
@@ -147,9 +153,12 @@ class CaseScreen(Screen[None]):
         self._show_lists(wide)
         self.query_one(KeyStrip).refresh()
 
-    def _room(self) -> int:
-        """Causes shown on a narrow screen."""
-        return 5 if self.app.size.height < 30 else 8
+    def _room(self, wide: bool) -> int:
+        """How many causes are shown."""
+        height = self.app.size.height
+        if wide:
+            return min(10, height // 4 if height >= 30 else height - 14)
+        return 5 if height < 30 else 8
 
     def _show_top(self) -> None:
         state = self.look.state
@@ -194,7 +203,7 @@ class CaseScreen(Screen[None]):
     def _inner(self, wide: bool) -> int:
         """Characters in a line of the step."""
         width = self.app.size.width
-        return (width * 57 // 100 if wide else width) - 5
+        return (width * 52 // 100 if wide else width) - 5
 
     def _holds(self) -> list[str]:
         """What a rule forbids now: of the step on the table, and of the case as a whole."""
@@ -228,7 +237,8 @@ class CaseScreen(Screen[None]):
             lines += [f"asked because: {step.note}"]
         if not wide:
             return [cut(line, width) for line in lines]
-        lines.append(f"governed by {step.reference}")
+        if step.kind not in ("escalate", "close"):
+            lines.append(f"governed by {step.reference}")
         return [row for line in lines for row in wrap(line, width)]
 
     def _show_heads(self) -> None:
@@ -244,21 +254,14 @@ class CaseScreen(Screen[None]):
             causes.aside = f"{look.conflict:.1f} bits of conflict: {look.doubtful} fits least"
         else:
             fit = "findings agree" if look.conflict < 1 else f"{look.conflict:.1f} bits of conflict"
-            causes.aside = f"{percent(look.coverage)} of all cases weighed · {fit}"
+            causes.aside = f"{percent(look.coverage)} covered · {fit}"
         self.query_one("#rivals-heading", Heading).aside = f"← → turn to one of {len(look.steps)}"
         self.query_one("#far-heading", Heading).aside = f"{len(look.state.events)} entries"
 
     def _show_lists(self, wide: bool) -> None:
-        most = 6 if wide else (1 if self.app.size.height < 30 else 3)
+        most = 6 if wide else (2 if self.app.size.height < 30 else 4)
         self.query_one(Rivals).show(self.look.steps, self.turned, len(self.look.held), most)
-        self.query_one(SoFar).show(self.look.state, max(1, self.app.size.height - 6))
-        self.call_after_refresh(self._trim_log)
-
-    def _trim_log(self) -> None:
-        """The newest entries, as many as there are lines."""
-        far = self.query_one(SoFar)
-        if far.size.height:
-            far.show(self.look.state, far.size.height)
+        self.query_one(SoFar).show(self.look.state)
 
     def _show_said(self) -> None:
         said = self.query_one("#said", Static)
@@ -269,7 +272,7 @@ class CaseScreen(Screen[None]):
         """Says that the entry is being weighed, or that it has been."""
         self._show_heads()
 
-    # -- foretelling -------------------------------------------------------------------------------
+    # -- foretelling ----------------------------------------------------------------------
 
     def _foretell(self) -> None:
         observable = self.observable
@@ -286,7 +289,7 @@ class CaseScreen(Screen[None]):
             self.branches = found
             self._show_answers(self.app.size.width >= 100)
 
-    # -- what a person may do ------------------------------------------------------------------------
+    # -- what a person may do -------------------------------------------------------------
 
     def check_action(self, action: str, parameters: tuple[object, ...]) -> bool | None:
         if self.look.state.closed is not None and action in PASSIVE:
@@ -535,7 +538,7 @@ class CaseScreen(Screen[None]):
         place = keeper.elsewhere(path)
         self.desk_app.tell_later(f"the whole case is in {place}")
 
-    # -- reading -------------------------------------------------------------------------------------
+    # -- reading --------------------------------------------------------------------------
 
     def action_why(self) -> None:
         look, observable = self.look, self.observable

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 from textual import on, work
 from textual.app import ComposeResult
-from textual.containers import Horizontal, VerticalScroll
+from textual.containers import Horizontal, Vertical, VerticalScroll
 from textual.screen import Screen
 from textual.suggester import SuggestFromList
 from textual.timer import Timer
@@ -48,7 +48,8 @@ class ComplaintScreen(Screen[None]):
         yield TopLine(id="top")
         with VerticalScroll(id="intake", can_focus=False):
             yield Heading("WHAT DID THE CREW REPORT", id="words-heading")
-            yield TextArea(id="words", compact=True, classes="hung", soft_wrap=True)
+            with Vertical(classes="hung", id="words-frame"):
+                yield TextArea(id="words", compact=True, tab_behavior="focus")
             yield Heading("WHAT IT MAY MEAN", id="proposals-heading")
             yield Proposals(id="proposals")
             yield Heading("WHICH CIRCUIT", id="circuit-heading")
@@ -83,7 +84,7 @@ class ComplaintScreen(Screen[None]):
         self.query_one("#proposals-heading", Heading).aside = "Space takes · ←→ point · Del drops"
         self._show_worked()
 
-    # -- when the circuits are read ------------------------------------------------------------
+    # -- when the circuits are read -------------------------------------------------------
 
     def ready(self, circuits: Mapping[str, Circuit], chosen: str) -> None:
         """Takes the circuits that there are."""
@@ -117,7 +118,7 @@ class ComplaintScreen(Screen[None]):
         self._show_worked()
         self._read_words()
 
-    # -- the crew's words ----------------------------------------------------------------------
+    # -- the crew's words -----------------------------------------------------------------
 
     @on(TextArea.Changed, "#words")
     def _typed(self) -> None:
@@ -143,14 +144,7 @@ class ComplaintScreen(Screen[None]):
         if number == self._asked:
             self.query_one(Proposals).propose(found)
 
-    def on_key(self, event: Any) -> None:
-        # Tab leaves the words; a text area would keep it.
-        if event.key == "tab" and self.focused is self.query_one("#words"):
-            event.stop()
-            event.prevent_default()
-            self.focus_next()
-
-    # -- recent work ---------------------------------------------------------------------------
+    # -- recent work ----------------------------------------------------------------------
 
     @on(Input.Submitted, "#worked")
     def _worked(self, event: Input.Submitted) -> None:
@@ -178,7 +172,7 @@ class ComplaintScreen(Screen[None]):
         self.query_one("#worked-list", Static).update(f"  {listed or 'nothing'}")
         self.query_one("#state-heading", Heading).aside = "Enter adds, again takes away"
 
-    # -- going on --------------------------------------------------------------------------------
+    # -- going on -------------------------------------------------------------------------
 
     def action_find_finding(self) -> None:
         circuit = self.circuit

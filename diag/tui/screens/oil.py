@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from textwrap import wrap
 from typing import TYPE_CHECKING
 
@@ -11,7 +12,7 @@ from textual.screen import Screen
 from textual.widgets import Static
 
 from diag.advice.steps import NOTICE
-from diag.oilpath import DRAWN, Layout, Marks, Part, Sheets, layout, svg
+from diag.oilpath import Layout, Marks, Part, Sheets, layout, svg
 from diag.record.narrate import percent
 from diag.tui.actions import OIL, bindings
 from diag.tui.desk import Look, marked
@@ -38,6 +39,8 @@ class OilScreen(Screen[None]):
         self.wanted: dict[str, bool] = {}
         self.heated = False
         self.marks = Marks()
+        self.laid_out = 0
+        """How often the circuit has been laid out."""
         self._number = 0
 
     def compose(self) -> ComposeResult:
@@ -59,21 +62,24 @@ class OilScreen(Screen[None]):
         assert isinstance(self.app, DiagApp)
         return self.app
 
-    # -- laying out takes a moment -------------------------------------------------------------
+    def _sheets(self) -> Sheets:
+        """The layouts of the circuit; they are made once and serve every look."""
+        return self.desk_app.sheets_of(self.look.circuit, self.heated)
+
+    # -- laying out takes a moment --------------------------------------------------------
 
     def _ask(self) -> None:
         size = self.query_one(OilView).size
         if size.width and size.height:
             self._number += 1
-            self._lay_out(
-                self._number, size.width, size.height, dict(self.wanted), self.refs[self.at]
-            )
+            ref = self.refs[self.at]
+            self._lay_out(self._number, size.width, size.height, dict(self.wanted), ref)
 
     @work(thread=True, exclusive=True, group="oil", exit_on_error=False)
     def _lay_out(
         self, number: int, width: int, height: int, wanted: dict[str, bool], ref: str
     ) -> None:
-        sheets = sheets_of(self.look, self.heated)
+        sheets = self._sheets()
         marks = marked(self.look, ref)
         made = sheets.layout(sheets.closed(marks, width, height, wanted))
         self.app.call_from_thread(self._laid_out, number, made, marks)
@@ -82,6 +88,7 @@ class OilScreen(Screen[None]):
         if number != self._number or not self.is_attached:
             return
         self.marks = marks
+        self.laid_out += 1
         self.query_one(OilView).show(made, marks)
         self._show_words()
 
@@ -98,7 +105,7 @@ class OilScreen(Screen[None]):
         foot.display = not written
         foot.update("\n".join(line for line, _ in lines[:6]))
 
-    # -- about a part ------------------------------------------------------------------------------
+    # -- about a part ---------------------------------------------------------------------
 
     def _card(self, width: int) -> list[tuple[str, bool]]:
         """Lines about the selected part, and whether each is printed strongly."""
@@ -115,6 +122,8 @@ class OilScreen(Screen[None]):
         pins = self.marks.pinned(part.members)
         lines += [(self._pin(pin.number, pin.text, pin.unremarkable, width), False) for pin in pins]
         lines += [(row, False) for row in self._modes(part, width)]
+        lines += [("", False), ("likely now", True)]
+        lines += [(f"{percent(c):>7} {title}"[:width], False) for title, c in self.marks.causes]
         return lines
 
     def _pin(self, number: int, text: str, unremarkable: bool, width: int) -> str:
@@ -128,7 +137,7 @@ class OilScreen(Screen[None]):
         modes.sort(key=lambda m: -present[m.ref])
         return [f"{percent(present[m.ref]):>7} {m.title}"[:width] for m in modes[:8]]
 
-    # -- what a person may do ------------------------------------------------------------------------
+    # -- what a person may do -------------------------------------------------------------
 
     def action_move(self, way: str) -> None:
         self.query_one(OilView).move(way)
@@ -142,7 +151,7 @@ class OilScreen(Screen[None]):
         if view.layout_ is None:
             return
         part = view.layout_.parts[view.selected]
-        section = sheets_of(self.look, self.heated).section_of(part.members[0])
+        section = self._sheets().section_of(part.members[0])
         if section is None:
             self.told(f"{part.title} stands by itself; nothing to fold")
             return
@@ -155,7 +164,7 @@ class OilScreen(Screen[None]):
 
     def action_fold_all(self) -> None:
         view = self.query_one(OilView)
-        ids = [s.id for s in sheets_of(self.look, self.heated).sections]
+        ids = [s.id for s in self._sheets().sections]
         folded = view.layout_ is not None and any(p.folded for p in view.layout_.parts.values())
         self.wanted = dict.fromkeys(ids, folded)
         self._ask()
@@ -176,10 +185,7 @@ class OilScreen(Screen[None]):
         self._write(self.desk_app.beside("oil-path.svg"), self.refs[self.at])
 
     @work(thread=True, exclusive=True, group="svg", exit_on_error=False)
-    def _write(self, path: object, ref: str) -> None:
-        from pathlib import Path
-
-        assert isinstance(path, Path)
+    def _write(self, path: Path, ref: str) -> None:
         drawn = svg(
             layout(self.look.circuit), marked(self.look, ref), self.look.circuit.title, NOTICE
         )
@@ -204,15 +210,3 @@ class OilScreen(Screen[None]):
         drawing = self.query_one(OilView).drawing
         card = "\n".join(line for line, _ in self._card(76))
         return f"{drawing.plain() if drawing else ''}\n{card}"
-
-
-_SHEETS: dict[tuple[str, bool], Sheets] = {}
-"""Layouts by content of the circuit: they are made once and serve every look."""
-
-
-def sheets_of(look: Look, heated: bool) -> Sheets:
-    """The layouts of the circuit of a look, with or without heat."""
-    key = (look.circuit.content_hash, heated)
-    if key not in _SHEETS:
-        _SHEETS[key] = Sheets(look.circuit, DRAWN | {"heat"} if heated else DRAWN)
-    return _SHEETS[key]

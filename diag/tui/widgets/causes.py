@@ -46,6 +46,7 @@ class Causes(Widget):
         self.rows: tuple[CauseRow, ...] = ()
         self.chosen = 0
         self.most = 5
+        self.tall = False
 
     def show(self, rows: Sequence[CauseRow]) -> None:
         """Sets the rows; the chosen cause stays chosen where it is still shown."""
@@ -76,18 +77,18 @@ class Causes(Widget):
             self.chosen = (self.chosen + by) % len(self.listed)
             self.refresh()
 
-    def set_most(self, most: int) -> None:
-        """How many rows there is room for."""
-        if most != self.most:
-            self.most = max(2, most)
+    def set_room(self, most: int, tall: bool) -> None:
+        """How many rows there is room for, and whether each may take two lines."""
+        if (most, tall) != (self.most, self.tall):
+            self.most, self.tall = max(2, most), tall
             self.refresh(layout=True)
 
     def get_content_height(self, container: object, viewport: object, width: int) -> int:
-        return len(self.listed)
+        return len(self.listed) * (2 if self.tall else 1)
 
     def render(self) -> Content:
         width = self.size.width
-        bar = max(8, min(28, width // 4))
+        bar = width - 10 if self.tall else max(8, min(28, width // 4))
         lines = [self._line(row, i, bar, width) for i, row in enumerate(self.listed)]
         return joined(lines)
 
@@ -98,15 +99,15 @@ class Causes(Widget):
         moved = abs(row.chance - row.before) >= MOVED
         arrow = "▲" if row.chance > row.before else "▼"
         told = f" {arrow} was {percent(row.before)}" if moved else ""
-        room = width - bar - 10 - cell_len(told)
+        head = (f"{mark}{percent(row.chance):>7} ", "bold")
+        gauge_ = ((stands, "$bar"), (gained, "$bar-gained"), (lost, "$bar-lost"))
+        room = width - (10 if self.tall else bar + 10) - cell_len(told)
         title = cut(row.title, room)
-        return Content.assemble(
-            (f"{mark}{percent(row.chance):>7} ", "bold"),
-            (stands, "$bar"),
-            (gained, "$bar-gained"),
-            (lost, "$bar-lost"),
-            f"{blank} ",
+        words = (
             (title, "bold" if number == self.chosen else ""),
             " " * max(0, room - cell_len(title)),
             (told, "$faint"),
         )
+        if self.tall:
+            return Content.assemble(head, *words, "\n", " " * 9, *gauge_)
+        return Content.assemble(head, *gauge_, f"{blank} ", *words)

@@ -81,7 +81,7 @@ class OilView(ScrollView, can_focus=False):
         self.refresh()
         return self.drawing is not None and self.drawing.clearing is not None
 
-    # -- moving ------------------------------------------------------------------------------------
+    # -- moving ---------------------------------------------------------------------------
 
     def move(self, way: str) -> None:
         """Selects the nearest part in a direction."""
@@ -118,7 +118,7 @@ class OilView(ScrollView, can_focus=False):
         if inside:
             self.select(min(inside)[1])
 
-    # -- drawing -----------------------------------------------------------------------------------
+    # -- drawing --------------------------------------------------------------------------
 
     def render_line(self, y: int) -> Strip:
         base = self.rich_style

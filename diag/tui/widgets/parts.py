@@ -7,14 +7,24 @@ from collections.abc import Sequence
 from textual.content import Content
 from textual.reactive import reactive
 from textual.widget import Widget
-from textual.widgets import Static
 
-from diag.tui.actions import acts_of, name_of
+from diag.tui.actions import Act, acts_of, name_of
+
+WIDE = 100
+"""Columns from which a screen is wide."""
 
 
 def cut(text: str, width: int) -> str:
     """A text in at most `width` characters, with a mark where it goes on."""
     return text if len(text) <= width else text[: max(width - 1, 0)] + "…"
+
+
+def cut_title(title: str, width: int) -> str:
+    """A title in at most `width` characters that keeps its operating point at the end."""
+    head, comma, tail = title.rpartition(", ")
+    if len(title) <= width or not comma or len(tail) > width // 2:
+        return cut(title, width)
+    return f"{cut(head, width - len(tail) - 2)}, {tail}"
 
 
 class Heading(Widget):
@@ -34,23 +44,33 @@ class Heading(Widget):
         aside = cut(self.aside, max(0, width - len(left) - len(name) - 3))
         tail = f" {aside}" if aside else ""
         line = "━" * max(0, width - len(left) - len(name) - len(tail))
-        return Content.assemble(
-            (left, "$feed"), (name, "bold"), (line, "$feed"), (tail, "$faint")
-        )
+        return Content.assemble((left, "$feed"), (name, "bold"), (line, "$feed"), (tail, "$faint"))
 
 
-class TopLine(Static):
+class TopLine(Widget):
     """Whose engine, which circuit, in what state; and what must not be overlooked."""
 
+    def __init__(self, id: str | None = None) -> None:
+        super().__init__(id=id)
+        self._left = self._right = self._banner = ""
+
     def show(self, left: str, right: str, banner: str = "") -> None:
-        width = max(self.size.width or self.app.size.width, 20)
-        right = cut(right, width // 2)
-        left = cut(left, width - len(right) - 2)
+        """Sets what stands on the left and on the right, and a line of its own below."""
+        self._left, self._right, self._banner = left, right, banner
+        self.refresh(layout=True)
+
+    def get_content_height(self, container: object, viewport: object, width: int) -> int:
+        return 1 + bool(self._banner)
+
+    def render(self) -> Content:
+        width = self.size.width
+        right = cut(self._right, width * 2 // 3)
+        left = cut(self._left, width - len(right) - 2)
         gap = " " * max(1, width - len(left) - len(right))
         lines = [Content.assemble((left, "bold"), gap, right)]
-        if banner:
-            lines.append(Content.assemble((cut(f" ■ {banner} ", width), "bold reverse")))
-        self.update(Content("\n").join(lines))
+        if self._banner:
+            lines.append(Content.assemble((cut(f" ■ {self._banner} ", width), "bold reverse")))
+        return joined(lines)
 
 
 class KeyStrip(Widget):
@@ -60,27 +80,47 @@ class KeyStrip(Widget):
         super().__init__(id=id)
         self.screen_name = screen_name
 
+    def get_content_height(self, container: object, viewport: object, width: int) -> int:
+        return len(self._rows(width))
+
     def render(self) -> Content:
-        width, parts = self.size.width, []
+        return joined([self._row(row) for row in self._rows(self.size.width)])
+
+    def _rows(self, width: int) -> list[list[tuple[Act, str]]]:
+        """The acts in one line on a wide screen, in two on a narrow one.
+
+        Help and leaving close the last line whatever else there is no room for.
+        """
         caps: dict[str, str] = getattr(self.app, "keycaps", {})
-        shown = [act for act in acts_of(self.screen_name) if act.strip]
-        shown.sort(key=lambda act: act.id not in ("help", "leave"))
-        room = width
-        for act in shown:
-            cap = caps.get(name_of(act), act.keycap)
-            size = len(cap) + len(act.word) + 5
-            if size > room:
-                continue
-            room -= size
-            parts.append((act, cap))
-        order = list(acts_of(self.screen_name))
-        parts.sort(key=lambda pair: order.index(pair[0]))
+        shown = [(a, caps.get(name_of(a), a.keycap)) for a in acts_of(self.screen_name) if a.strip]
+        always = [pair for pair in shown if pair[0].id in ("help", "leave")]
+        others = [pair for pair in shown if pair not in always]
+        rows: list[list[tuple[Act, str]]] = [[]]
+        most = 1 if width >= WIDE else 2
+        kept = sum(_size(*pair) for pair in always)
+        room = width - (kept if most == 1 else 0)
+        for act, cap in others:
+            if _size(act, cap) > room and len(rows) < most:
+                rows.append([])
+                room = width - kept
+            if _size(act, cap) <= room:
+                room -= _size(act, cap)
+                rows[-1].append((act, cap))
+        rows[-1] += always
+        return rows
+
+    def _row(self, row: list[tuple[Act, str]]) -> Content:
         pieces: list[tuple[str, str]] = []
-        for act, cap in parts:
+        for act, cap in row:
             faint = self.screen.check_action(act.id, ()) is None
             pieces.append((f" {cap} ", "reverse dim" if faint else "reverse"))
             pieces.append((f" {act.word}  ", "dim" if faint else ""))
         return Content.assemble(*pieces)
+
+
+def _size(act: Act, cap: str) -> int:
+    """Characters that an act takes on the strip."""
+    return len(cap) + len(act.word) + 5
 
 
 def joined(lines: Sequence[Content]) -> Content:

@@ -33,7 +33,7 @@ START = f"""Fault isolation for gas-turbine oil circuits.
 
 {NOTICE}
 
-Without a command: asks for the circuit and begins a session.
+Without a command: opens the terminal screen; where there is no terminal, asks in plain lines.
 
 \b
 Example:
@@ -217,6 +217,11 @@ def _drop_output() -> None:
 def start(context: typer.Context) -> None:  # its help is START
     if context.invoked_subcommand is not None:
         return
+    if _on_a_terminal():
+        from diag.tui import run as run_screen
+
+        run_screen()
+        return
     names = circuit_names()
     for number, name in enumerate(names, start=1):
         print(f"  {number} {name}")
@@ -261,6 +266,12 @@ def isolate(
         parse_finding(known, text)
     path = log or _default_log(known)
     _require_place(path)
+    if not plain and _on_a_terminal():
+        from diag.tui import run as run_screen
+
+        given = tuple(observe or ())
+        run_screen(circuit, overlay or (), path, given, engine, aircraft, by, touched)
+        return
     keeper = _Keeper(path)
     session = Session(known, keeper.save)
     front = PlainSession(session, _ask, print, _now, by, keeper)
@@ -691,6 +702,12 @@ def _ask(prompt: str) -> str:
     if not sys.stdin.isatty():
         print(text)  # nobody typed it: without it, what is printed would not be understood
     return text
+
+
+def _on_a_terminal() -> bool:
+    """Whether a person sits at both ends, with a terminal that can be drawn on."""
+    both = sys.stdin.isatty() and sys.stdout.isatty()
+    return both and os.environ.get("TERM", "dumb") != "dumb"
 
 
 def _default_log(circuit: Circuit) -> Path:

@@ -137,7 +137,7 @@ def _adopt_shunts(flow: Flow, groups: Mapping[str, list[str]], home: dict[str, s
     """A shunt belongs to what it leads round."""
     for name, (source, target) in flow.shunts.items():
         order = {n: i for i, n in enumerate((flow.tank, *flow.trunk))}
-        inner = source
+        inner = flow.onward.get(source, source)
         if source in order and target in order and order[target] > order[source] + 1:
             inner = flow.trunk[order[source]]
         title = home.get(inner) or home.get(source)

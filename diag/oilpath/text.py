@@ -97,7 +97,8 @@ def fits(layout: Layout, width: int, height: int) -> bool:
     """Whether the layout can be drawn in so many characters."""
     across, down = used_lines(layout)
     wide = least(layout.columns, across, NARROW, 1)
-    return wide <= width and least(layout.bands, down, LINES, 0) <= height
+    high = least(layout.bands, down, LINES, 0) + bool(layout.overboard)
+    return wide <= width and high <= height
 
 
 def text(

@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from datetime import datetime
+from importlib.resources import files
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -41,7 +42,7 @@ class DiagApp(App[None]):
         theme: one of `themes.NAMES`.
     """
 
-    CSS_PATH = "diag.tcss"
+    CSS = (files("diag.tui") / "diag.tcss").read_text(encoding="utf-8")
     TITLE = "diag"
     HORIZONTAL_BREAKPOINTS = [(0, "-narrow"), (100, "-wide")]  # noqa: RUF012
     BINDINGS = bindings(ANY)
@@ -101,6 +102,10 @@ class DiagApp(App[None]):
         return self._desk
 
     def on_mount(self) -> None:
+        self.start()
+
+    def start(self) -> None:
+        """Shows the first screen, and reads what it needs."""
         if self.request.resume is not None:
             self.push_screen(WaitingScreen(f"reading {self.request.resume} …"))
             self.resume(self.request.resume)
@@ -280,16 +285,12 @@ class DiagApp(App[None]):
         for screen in self.screen_stack:
             if isinstance(screen, CaseScreen):
                 screen.show(look, said)
-                while self.screen is not screen and self._covers(self.screen):
+                while name_of_screen(self.screen) == CASES:
                     self.pop_screen()
                 return
         case = CaseScreen(look)
         case.said = said
         self.switch_screen(case)
-
-    def _covers(self, screen: Screen[Any]) -> bool:
-        """Whether a screen gives way when another case is opened."""
-        return not isinstance(screen, DiagApp) and type(screen).__name__ == "CasesScreen"
 
     def _set_busy(self, busy: bool) -> None:
         self.busy = busy
@@ -371,14 +372,9 @@ class DiagApp(App[None]):
         from diag.tui.dialogs.reading import Reader, help_lines
 
         if not isinstance(self.screen, Reader):
-            self.push_screen(Reader("ALL KEYS", help_lines(self.keycaps, self.screen_name)))
-
-    @property
-    def screen_name(self) -> str:
-        """Which acts the present screen has."""
-        names = {"CaseScreen": CASE, "ComplaintScreen": COMPLAINT, "OilScreen": OIL,
-                 "CasesScreen": CASES}  # fmt: skip
-        return names.get(type(self.screen).__name__, ANY)
+            self.push_screen(
+                Reader("ALL KEYS", help_lines(self.keycaps, name_of_screen(self.screen)))
+            )
 
     def action_copy(self) -> None:
         words = self._words()
@@ -391,7 +387,7 @@ class DiagApp(App[None]):
         if not words:
             return
         stamp = self.now().strftime("%Y%m%d-%H%M%S")
-        path = self.beside(f"{self.screen_name}-{stamp}.txt")
+        path = self.beside(f"{name_of_screen(self.screen)}-{stamp}.txt")
         try:
             path.parent.mkdir(parents=True, exist_ok=True)
             path.write_text(words + "\n", encoding="utf-8")
@@ -434,7 +430,7 @@ class DiagApp(App[None]):
     def get_system_commands(self, screen: Screen[Any]) -> Iterable[SystemCommand]:
         """Everything that a key can do here, by name."""
         seen = set()
-        for act in acts_of(self.screen_name):
+        for act in acts_of(name_of_screen(screen)):
             if act.help in seen or "(" in act.id or act.id == "answer":
                 continue
             seen.add(act.help)
@@ -447,3 +443,14 @@ class DiagApp(App[None]):
             await self.run_action(action, owner)
 
         return run
+
+
+def name_of_screen(screen: Screen[Any]) -> str:
+    """Which acts of the registry a screen has."""
+    names = {
+        "CaseScreen": CASE,
+        "ComplaintScreen": COMPLAINT,
+        "OilScreen": OIL,
+        "CasesScreen": CASES,
+    }
+    return names.get(type(screen).__name__, ANY)

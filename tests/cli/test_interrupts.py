@@ -102,7 +102,11 @@ def test_leaving_a_whole_process(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize("key", KEYS)
-def test_leaving_before_there_is_a_case(key: str, tmp_path: Path) -> None:
+def test_leaving_before_there_is_a_case(
+    key: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    # Where nothing can be drawn, the same commands ask in plain lines.
+    monkeypatch.setenv("TERM", "dumb")
     for arguments, prompt in ((), "circuit> "), (("isolate", PUMP), "complaint> "):
         child = Forked(*arguments, cwd=tmp_path)
         child.expect(prompt)

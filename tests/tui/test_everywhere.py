@@ -172,7 +172,7 @@ def held_engine(monkeypatch: pytest.MonkeyPatch) -> Iterator[float]:
         return record(self, event)
 
     monkeypatch.setattr(Session, "add", slowly)
-    yield held
+    return held
 
 
 def test_screen_takes_keys_while_the_engine_is_held(tmp_path: Path, held_engine: float) -> None:

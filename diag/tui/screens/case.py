@@ -152,6 +152,33 @@ class CaseScreen(Screen[None]):
         self._show_heads()
         self._show_lists(wide)
         self.query_one(KeyStrip).refresh()
+        self.call_after_refresh(self._share_room)
+
+    def _share_room(self) -> None:
+        """A long step leaves fewer lines to the rest of the screen."""
+        body = self.query_one("#now-body", VerticalScroll)
+        bench = self.query_one("#bench")
+        if self.app.size.width >= 100:
+            # The step takes the lines it needs, and the log what is left of them.
+            shown = [child for child in body.children if child.display]
+            needs = 1 + sum(c.outer_size.height + c.styles.margin.height for c in shown)
+            most = bench.size.height * 4 // 5
+            bench.styles.grid_rows = f"{max(8, min(needs, most))} 1fr"
+            long = needs > most
+        else:
+            long = bool(body.max_scroll_y)
+            self._share_narrow()
+        if long:
+            kind = KINDS.get(self.step.kind, self.step.kind)
+            self.query_one("#now-heading", Heading).aside = f"{kind} · PgDn: more"
+
+    def _share_narrow(self) -> None:
+        left = self.query_one("#bench").size.height - self.query_one("#now-column").size.height
+        # Three headings, a line of the log and one other step at the least.
+        most = max(3, min(self._room(False), left - 5))
+        self.query_one(Causes).set_room(most, tall=False)
+        rivals = max(1, min(4, left - most - 5))
+        self.query_one(Rivals).show(self.look.steps, self.turned, len(self.look.held), rivals)
 
     def _room(self, wide: bool) -> int:
         """How many causes are shown."""
@@ -370,6 +397,10 @@ class CaseScreen(Screen[None]):
         self._clear_fields()
         self._draw()
         self._foretell()
+
+    def action_page(self, way: str) -> None:
+        body = self.query_one("#now-body", VerticalScroll)
+        body.scroll_page_down(animate=False) if way == "down" else body.scroll_home(animate=False)
 
     def action_cause_up(self) -> None:
         self.query_one(Causes).move(-1)

@@ -42,6 +42,7 @@ class OilScreen(Screen[None]):
         self.laid_out = 0
         """How often the circuit has been laid out."""
         self._number = 0
+        self._then = ""
 
     def compose(self) -> ComposeResult:
         yield TopLine(id="top")
@@ -89,7 +90,8 @@ class OilScreen(Screen[None]):
             return
         self.marks = marks
         self.laid_out += 1
-        self.query_one(OilView).show(made, marks)
+        self.query_one(OilView).show(made, marks, self._then)
+        self._then = ""
         self._show_words()
 
     def _show_words(self) -> None:
@@ -122,8 +124,10 @@ class OilScreen(Screen[None]):
         pins = self.marks.pinned(part.members)
         lines += [(self._pin(pin.number, pin.text, pin.unremarkable, width), False) for pin in pins]
         lines += [(row, False) for row in self._modes(part, width)]
-        lines += [("", False), ("likely now", True)]
-        lines += [(f"{percent(c):>7} {title}"[:width], False) for title, c in self.marks.causes]
+        causes = [(f"{percent(c):>7} {title}"[:width], False) for title, c in self.marks.causes]
+        space = view.clearing
+        if space and len(lines) + 2 + len(causes) <= space.height:
+            lines += [("", False), ("likely now", True), *causes]
         return lines
 
     def _pin(self, number: int, text: str, unremarkable: bool, width: int) -> str:
@@ -156,10 +160,7 @@ class OilScreen(Screen[None]):
             self.told(f"{part.title} stands by itself; nothing to fold")
             return
         self.wanted[section.id] = part.folded
-        if not part.folded:
-            view.selected = section.id
-        else:
-            view.selected = part.members[0]
+        self._then = part.members[0] if part.folded else section.id
         self._ask()
 
     def action_fold_all(self) -> None:

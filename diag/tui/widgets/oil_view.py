@@ -43,9 +43,16 @@ class OilView(ScrollView, can_focus=False):
         self.card: Sequence[tuple[str, bool]] = ()
         self._styles: dict[str, Style] = {}
 
-    def show(self, layout: Layout, marks: Marks) -> None:
-        """Draws a layout; the selected part stays selected where it is still there."""
+    def show(self, layout: Layout, marks: Marks, selected: str = "") -> None:
+        """Draws a layout; the selected part stays selected where it is still there.
+
+        Args:
+            layout: what to draw.
+            marks: what to mark on it.
+            selected: another part to select.
+        """
         self.layout_, self.marks = layout, marks
+        self.selected = selected or self.selected
         if self.selected not in layout.parts:
             inside = layout.part_of(self.selected.rstrip("+"))
             self.selected = inside or self._most_suspected(layout, marks)
@@ -155,6 +162,7 @@ class OilView(ScrollView, can_focus=False):
     def _style(self, name: str) -> Style:
         if name not in self._styles:
             words = [w for w in name.split() if w in STYLES]
+            words = ["selected"] if "selected" in words else words
             style = self.rich_style
             for word in words:
                 style += self.get_component_rich_style(f"oil--{word}", partial=True)

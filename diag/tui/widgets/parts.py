@@ -41,8 +41,8 @@ class Heading(Widget):
         width = self.size.width
         left = f"{'┗' if self._last else '┣'}━ "
         name = f"{self.label} "
-        aside = cut(self.aside, max(0, width - len(left) - len(name) - 3))
-        tail = f" {aside}" if aside else ""
+        aside = cut(self.aside, max(0, width - len(left) - len(name) - 4))
+        tail = f" {aside} " if aside else ""
         line = "━" * max(0, width - len(left) - len(name) - len(tail))
         return Content.assemble((left, "$feed"), (name, "bold"), (line, "$feed"), (tail, "$faint"))
 

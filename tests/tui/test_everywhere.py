@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
@@ -163,7 +162,7 @@ def test_words_go_to_the_clipboard_and_to_a_file(tmp_path: Path) -> None:
 
 
 @pytest.fixture
-def held_engine(monkeypatch: pytest.MonkeyPatch) -> Iterator[float]:
+def held_engine(monkeypatch: pytest.MonkeyPatch) -> float:
     """An engine that takes two seconds for every change."""
     held, record = 2.0, Session.add
 

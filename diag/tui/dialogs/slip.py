@@ -35,8 +35,8 @@ class Slip(ModalScreen[T], Generic[T]):
             yield from self.body()
 
     def body(self) -> ComposeResult:
-        """The widgets of the slip."""
-        raise NotImplementedError
+        """The widgets of the slip; each kind of slip brings its own."""
+        yield from ()
 
     def on_mount(self) -> None:
         self.query_one("#slip-heading", Heading).aside = self.hint
